@@ -1,4 +1,4 @@
-"""Physical constants (CODATA 2018, as in `scipy.constants`), spelled out so that importing is free.
+"""Physical constants (CODATA 2022, as in `scipy.constants`), spelled out so that importing is free.
 
 A test compares every value with `scipy.constants`. Symbols: c speed of light, e elementary
 charge, m_e electron mass, ε0 vacuum permittivity, k Boltzmann constant, u atomic mass constant.
@@ -30,15 +30,15 @@ PPM: float = 1e-6
 BOLTZMANN: float = 1.380649e-23
 """Boltzmann constant, J/K (exact)."""
 
-UNIFIED_MASS: float = 1.66053906660e-27
-"""Atomic mass constant, kg (CODATA 2018)."""
+UNIFIED_MASS: float = 1.66053906892e-27
+"""Atomic mass constant, kg (CODATA 2022)."""
 
 DOPPLER_KMS2: float = 2.0 * BOLTZMANN / UNIFIED_MASS * 1e-6
 """2k/u in (km/s)² u/K: the thermal part of b² is ``DOPPLER_KMS2 * T / mass``."""
 
 _ELEMENTARY_CHARGE = 1.602176634e-19  # C (exact)
-_ELECTRON_MASS = 9.1093837015e-31  # kg (CODATA 2018)
-_EPSILON_0 = 8.8541878128e-12  # F/m (CODATA 2018)
+_ELECTRON_MASS = 9.1093837139e-31  # kg (CODATA 2022)
+_EPSILON_0 = 8.8541878188e-12  # F/m (CODATA 2022)
 
 DEPTH_CONSTANT: float = (
     # π e² / (m_e c) in Gaussian units is e² / (4 ε0 m_e c) in SI, in m²/s

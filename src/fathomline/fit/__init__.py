@@ -1,12 +1,13 @@
 """Least squares, covariance, and the proof of convergence."""
 
 from fathomline.fit.covariance import Covariance, covariance_from_jacobian
-from fathomline.fit.fitting import FLAGS, FitSettings, fit_model
+from fathomline.fit.fitting import CAUTIONS, FLAGS, FitSettings, fit_model
 from fathomline.fit.least_squares import Minimum, minimise
 from fathomline.fit.lmfit_bridge import free_vector, minimise_with_lmfit, to_lmfit
 from fathomline.fit.result import FitResult, Restart, aicc
 
 __all__ = [
+    "CAUTIONS",
     "FLAGS",
     "Covariance",
     "FitResult",

@@ -16,13 +16,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fathomline.errors import FitError
-from fathomline.fit.covariance import Covariance, covariance_from_jacobian
+from fathomline.fit.covariance import SINGULAR, Covariance, covariance_from_jacobian
 from fathomline.fit.least_squares import Minimum, minimise
 from fathomline.fit.lmfit_bridge import minimise_with_lmfit
 from fathomline.fit.result import FitResult, Restart
 from fathomline.model import AbsorberModel
 
-__all__ = ["FLAGS", "FitSettings", "fit_model"]
+__all__ = ["CAUTIONS", "FLAGS", "FitSettings", "fit_model"]
 
 Array = NDArray[np.float64]
 Progress = Callable[[str, float], None]
@@ -32,11 +32,16 @@ FLAGS = {
     "restart-differs": "a restart from other values ended at another Δα/α",
     "no-error": "Δα/α has no error: the data do not constrain it alone",
     "alpha-at-bound": "Δα/α lies at a bound",
-    "at-bound": "a component parameter lies at a bound",
-    "poor-fit": "χ² is improbably high for its degrees of freedom",
+    "poor-fit": "χ²/ν is above 1.5",
     "no-freedom": "there are no more data than free parameters",
 }
-"""Flags of a result and what they mean."""
+"""Flags of a result that should not be trusted, and what they mean."""
+
+CAUTIONS = {
+    "at-bound": "a component parameter lies at a bound",
+    "singular": "a parameter other than Δα/α is not constrained by the data",
+}
+"""Flags that ask for a look but leave Δα/α valid."""
 
 RESTART_SHIFT = 10.0  # σ of Δα/α
 _RETURN_SIGMA = 0.02
@@ -196,6 +201,8 @@ def _record(
     others = [i for i in np.flatnonzero(best.at_bound) if i != alpha]
     if others:
         flags.append("at-bound")
+    if any(covariance.reasons[name] == SINGULAR for name in covariance.reasons):
+        flags.append("singular")
     if ndof <= 0:
         flags.append("no-freedom")
     elif best.chi2 / ndof > _POOR_CHI2_NU:

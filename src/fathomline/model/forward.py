@@ -278,6 +278,25 @@ class AbsorberModel:
         value: Array = basis @ theta[list(segment.continuum)]
         return value
 
+    def resampled(self, free: Array, *, refine: float = 1.0) -> AbsorberModel | None:
+        """The same model on a finer grid, when the values `free` need one; else None.
+
+        The grid was chosen from the start values; narrower or stronger lines may need a finer one.
+        """
+        theta = self.parameters.expand(free)
+        wanted = [spacing / refine for spacing in self.required_spacing(theta)]
+        if all(w >= 0.98 * s for w, s in zip(wanted, self.spacings, strict=True)):
+            return None
+        return AbsorberModel(
+            self.redshift,
+            self.parameters,
+            self.alpha,
+            self.components,
+            self.segments,
+            refine=self.refine * refine,
+            sampled_for=theta,
+        )
+
     # -- evaluation -------------------------------------------------------------------------
 
     def residuals(self, free: Array) -> Array:

@@ -82,6 +82,17 @@ class TransitionLines:
         """Central optical depth if all lines of the transition coincided (an upper bound)."""
         return float(DEPTH_CONSTANT * column * np.sum(self._strength * 1e8 / self._omega / b))
 
+    def reach(self, b: float, column: float, depth: float) -> float:
+        """Distance from the line centre, km/s, beyond which τ stays below `depth`.
+
+        The larger of the Gaussian core and of the Lorentzian wing, τ ≈ τ0 a b²/(√π v²).
+        """
+        centre = self.peak_depth(np.full(self.masses.size, b), column)
+        core = b * math.sqrt(max(math.log(max(centre / depth, 1.0)), 0.0))
+        rest = 1e8 / self._omega.min()
+        wing = math.sqrt(centre * self._gamma * _DAMPING * rest * b / (depth * math.sqrt(math.pi)))
+        return max(core, float(wing))
+
     def depth(self, g: Array, s: float, b: Array, column: float, x: float) -> Array:
         """Optical depth τ (n,).
 
