@@ -1,0 +1,164 @@
+"""Synthetic spectra of a job's model, with noise: for demos, tests and planning.
+
+The absorption comes from `fathomline.job.synthesis`, which shares no code with the fitted model.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fathomline.atomic import AtomicData, Transition
+from fathomline.constants import C_KMS
+from fathomline.errors import JobError
+from fathomline.job.number import Reference
+from fathomline.job.schema import Component, Job
+from fathomline.job.synthesis import Cloud, synthetic_transmission
+from fathomline.spectra import Spectrum
+
+__all__ = ["Noise", "clouds_of", "simulate", "synthetic_grid"]
+
+Array = NDArray[np.float64]
+
+_MARGIN_KMS = 60.0  # of a synthetic spectrum beyond its windows
+
+
+@dataclass(frozen=True, slots=True)
+class Noise:
+    """Noise of a synthetic spectrum.
+
+    Attributes
+    ----------
+    snr : float
+        Signal-to-noise ratio per pixel in the continuum; `math.inf` for none (then the error
+        column is that of a ratio of 1e4).
+    seed : int
+    """
+
+    snr: float = 100.0
+    seed: int = 1
+
+
+def clouds_of(job: Job) -> list[Cloud]:
+    """The components of a job at their start values."""
+
+    def value(k: int, quantity: str, ion: str | None = None) -> float:
+        return job.start_value(Reference("component", k, quantity, ion))
+
+    def cloud(k: int, component: Component) -> Cloud:
+        width = "b" if component.b is not None else "b_turb"
+        return Cloud(
+            velocity=value(k, "velocity"),
+            log_columns={ion: value(k, "logN", ion) for ion in component.logN},
+            b_turb=value(k, width) if getattr(component, width) is not None else 0.0,
+            temperature=value(k, "temperature") if component.temperature is not None else 0.0,
+        )
+
+    return [cloud(k, component) for k, component in enumerate(job.components)]
+
+
+def synthetic_grid(job: Job, atoms: AtomicData, spectrum: str, pixel: float) -> Array:
+    """Edges (n + 1,) in Å of log-linear pixels of `pixel` km/s over the job's regions.
+
+    Raises
+    ------
+    JobError
+        No region draws on the spectrum.
+    """
+    z = job.absorber.redshift
+    limits = [
+        atoms[region.transition].observed_wavelength(z) * (1.0 + v / C_KMS)
+        for region in job.regions
+        if region.spectra is None or spectrum in region.spectra
+        for v in (region.window[0] - _MARGIN_KMS, region.window[1] + _MARGIN_KMS)
+    ]
+    if not limits:
+        raise JobError(f"no region draws on spectrum {spectrum!r}: there is nothing to simulate")
+    low, high = min(limits), max(limits)
+    count = math.ceil(C_KMS * math.log(high / low) / pixel)
+    edges: Array = low * np.exp(np.arange(count + 1) * (pixel / C_KMS))
+    return edges
+
+
+def _blocks(centres: Sequence[float], half_width: float) -> list[tuple[float, float]]:
+    """Wavelength ranges about line centres, merged where they touch."""
+    merged: list[list[float]] = []
+    for centre in sorted(centres):
+        low, high = centre * (1.0 - half_width / C_KMS), centre * (1.0 + half_width / C_KMS)
+        if merged and low <= merged[-1][1]:
+            merged[-1][1] = high
+        else:
+            merged.append([low, high])
+    return [(low, high) for low, high in merged]
+
+
+def _transmission(job: Job, atoms: AtomicData, edges: Array, fwhm: float, dalpha: float) -> Array:
+    z = job.absorber.redshift
+    clouds = clouds_of(job)
+    ions = {ion for cloud in clouds for ion in cloud.log_columns}
+    lines: list[Transition] = [
+        t for ion in ions for t in atoms.find(ion=ion, extra=True) if t.ground
+        and edges[0] < t.observed_wavelength(z) < edges[-1]
+    ]
+    fastest = max(abs(cloud.velocity) for cloud in clouds)
+    out = np.ones(edges.size - 1)
+    for low, high in _blocks([t.observed_wavelength(z) for t in lines], fastest + 500.0):
+        first, last = np.searchsorted(edges, [low, high])
+        first, last = max(first - 1, 0), min(last + 1, edges.size)
+        near = [t for t in lines if low <= t.observed_wavelength(z) <= high]
+        out[first : last - 1] = synthetic_transmission(
+            edges[first:last], near, clouds, redshift=z, fwhm=fwhm, dalpha_ppm=dalpha
+        )
+    return out
+
+
+def simulate(
+    job: Job,
+    atoms: AtomicData,
+    edges: Sequence[Array],
+    noise: Noise,
+    *,
+    dalpha_ppm: float | None = None,
+) -> tuple[Spectrum, ...]:
+    """Synthetic spectra of a job's model.
+
+    Parameters
+    ----------
+    job : Job
+        Components are taken at their start values.
+    atoms : AtomicData
+    edges : sequence of array
+        Pixel edges of each spectrum of the job, Å.
+    noise : Noise
+    dalpha_ppm : float, optional
+        Δα/α; default: the start value of the job.
+
+    Returns
+    -------
+    tuple of Spectrum
+        Flux 1 in the continuum, continuum column included.
+    """
+    alpha = job.start_value(Reference("alpha", 0, "dalpha")) if dalpha_ppm is None else dalpha_ppm
+    children = np.random.SeedSequence(noise.seed).spawn(len(job.spectra))
+    spectra = []
+    for i, (table, pixels) in enumerate(zip(job.spectra, edges, strict=True)):
+        resolution = table.resolution
+        if resolution.R is not None:
+            fwhm = C_KMS / resolution.R
+        else:
+            fwhm = job.start_value(Reference("spectrum", i, "fwhm"))
+        flux = _transmission(job, atoms, pixels, fwhm, alpha)
+        sigma = np.full(flux.size, 1e-4 if math.isinf(noise.snr) else 1.0 / noise.snr)
+        if not math.isinf(noise.snr):
+            flux = flux + sigma * np.random.default_rng(children[i]).standard_normal(flux.size)
+        spectra.append(
+            Spectrum.from_arrays(
+                np.sqrt(pixels[:-1] * pixels[1:]), flux, sigma, np.ones(flux.size), name=table.id
+            )
+        )
+    return tuple(spectra)
+
