@@ -55,6 +55,7 @@ def local_level(
     ------
     SpectrumError
         If shapes differ, no pixel is good, or the level is not positive.
+
     """
     values = np.asarray(flux, dtype=np.float64)
     sigma = np.asarray(error, dtype=np.float64)

@@ -28,9 +28,7 @@ def _specutils() -> ModuleType:
     return module
 
 
-def from_specutils(
-    spectrum: Any, *, lsf: LineSpread | None = None, name: str = ""
-) -> Spectrum:
+def from_specutils(spectrum: Any, *, lsf: LineSpread | None = None, name: str = "") -> Spectrum:
     """Make a spectrum from a one-dimensional specutils spectrum.
 
     Parameters
@@ -47,6 +45,7 @@ def from_specutils(
         If specutils is not installed.
     SpectrumError
         If there is no uncertainty, or the arrays make no spectrum.
+
     """
     _specutils()
     from astropy import units
@@ -91,6 +90,7 @@ def to_specutils(spectrum: Spectrum) -> Any:
     ------
     MissingExtraError
         If specutils is not installed.
+
     """
     module = _specutils()
     from astropy import units

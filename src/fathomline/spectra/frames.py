@@ -51,6 +51,7 @@ def to_barycentric(wavelength: ArrayLike, velocity_kms: float) -> NDArray[Any]:
     ------
     SpectrumError
         If the velocity is not finite or faster than `FASTEST_OBSERVER`.
+
     """
     if not math.isfinite(velocity_kms) or abs(velocity_kms) > FASTEST_OBSERVER:
         raise SpectrumError(
@@ -101,6 +102,7 @@ def barycentric_velocity(
     ------
     SpectrumError
         If a number is not finite or out of its range.
+
     """
     limits = {
         "right ascension": (ra_deg, -360.0, 360.0),
@@ -142,6 +144,8 @@ def _angle(header: Mapping[str, Any], key: str, hours: bool) -> float | None:
             numbers = [abs(float(part)) for part in parts]
         except ValueError:
             return None
+        if len(numbers) == 1:
+            return float(parts[0])
         if not 2 <= len(numbers) <= 3:
             return None
         size = sum(number / 60.0**i for i, number in enumerate(numbers))
@@ -195,6 +199,7 @@ def header_velocity(header: Mapping[str, Any]) -> tuple[float | None, str]:
         km/s, or None when the header does not allow it.
     reason
         What is missing, or from what it was computed.
+
     """
     missing: list[str] = []
     ra, dec = _angle(header, "RA", True), _angle(header, "DEC", False)
@@ -225,7 +230,9 @@ def header_velocity(header: Mapping[str, Any]) -> tuple[float | None, str]:
             sky = SkyCoord(ra, dec, unit="deg")
         else:
             # precession moves an apparent position by 0.4° in 25 years, 0.2 km/s
-            sky = SkyCoord(ra, dec, unit="deg", frame=FK5(equinox=Time(equinox, format="jyear"))).icrs
+            sky = SkyCoord(
+                ra, dec, unit="deg", frame=FK5(equinox=Time(equinox, format="jyear"))
+            ).icrs
         velocity = _velocity(sky, Time(middle, format="mjd", scale="utc"), location)
     except Exception as exc:  # numbers out of range are reported in many ways
         return None, f"the header's position, time or site make no sense ({exc})"

@@ -44,6 +44,7 @@ class GaussianLineSpread:
     ------
     SpectrumError
         If a number is out of its range.
+
     """
 
     fwhm: float
@@ -80,6 +81,7 @@ class GaussianLineSpread:
         ------
         SpectrumError
             If a number is out of its range.
+
         """
         power = _finite_number(resolving_power, "the resolving power")
         if power <= 0.0:

@@ -44,9 +44,9 @@ def _ciddor1996(s2: NDArray[np.float64]) -> NDArray[np.float64]:
     return 1.0 + 5.792105e-2 / (238.0185 - s2) + 1.67917e-3 / (57.362 - s2)
 
 
-AIR_FORMULAS: MappingProxyType[
-    str, Callable[[NDArray[np.float64]], NDArray[np.float64]]
-] = MappingProxyType({"morton2000": _morton2000, "ciddor1996": _ciddor1996})
+AIR_FORMULAS: MappingProxyType[str, Callable[[NDArray[np.float64]], NDArray[np.float64]]] = (
+    MappingProxyType({"morton2000": _morton2000, "ciddor1996": _ciddor1996})
+)
 """Name to n(s²), s in 1/µm."""
 
 
@@ -86,6 +86,7 @@ def refractive_index(wavelength: ArrayLike, formula: str = "morton2000") -> NDAr
     ------
     SpectrumError
         If the formula is unknown or a wavelength is not finite or below 2000 Å.
+
     """
     values = _checked(wavelength, formula)
     return AIR_FORMULAS[formula]((1e4 / values) ** 2)

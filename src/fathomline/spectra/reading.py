@@ -53,6 +53,7 @@ class Reading:
         Number of pixels masked for any reason.
     guesses, warnings, steps
         Plain sentences, in the order in which they arose.
+
     """
 
     file: str | None = None

@@ -63,7 +63,9 @@ def _array(values: object, name: str, unit: object = None) -> FloatArray:
     try:
         result = np.array(values, dtype=np.float64)
     except (TypeError, ValueError) as exc:
-        raise SpectrumError(f"{name}: expected numbers of shape (n,), found {values!r:.80}") from exc
+        raise SpectrumError(
+            f"{name}: expected numbers of shape (n,), found {values!r:.80}"
+        ) from exc
     if result.ndim != 1:
         raise SpectrumError(f"{name}: expected the shape (n,), found {result.shape}")
     return result
@@ -124,6 +126,7 @@ def mask_pixels(
         Shape (n,), True = use.
     masked
         Reason (of `MASK_REASONS`) to number of pixels, reasons that occur only.
+
     """
     finite_error = np.isfinite(error)
     bad: dict[str, BoolArray] = {
@@ -172,6 +175,7 @@ class Spectrum:
     ------
     SpectrumError
         If shapes differ, or the wavelengths are not finite and strictly increasing.
+
     """
 
     wavelength: FloatArray
@@ -245,6 +249,7 @@ class Spectrum:
         SpectrumError
             If shapes differ, a unit does not fit, or wavelengths are not finite, positive and
             strictly monotonic (the message names the first bad row, counted from 1).
+
         """
         where = f"spectrum {name!r}" if where is None else where
         record = Reading() if reading is None else reading
@@ -283,9 +288,7 @@ class Spectrum:
         _check_increasing(waves, reverse, where)
         if reverse:
             steps = (*steps, "the wavelengths decreased: the order of all pixels was reversed")
-        mask, masked = mask_pixels(
-            arrays["flux"], arrays["error"], arrays.get("continuum"), chosen
-        )
+        mask, masked = mask_pixels(arrays["flux"], arrays["error"], arrays.get("continuum"), chosen)
         return cls(
             wavelength=waves,
             flux=arrays["flux"],
@@ -344,19 +347,27 @@ class Spectrum:
     def bounds(self) -> tuple[FloatArray, FloatArray]:
         """Return the lower and upper edge of each pixel, Å, shape (n,) each.
 
-        Equal to the neighbouring `edges`, except beside a hole in the grid, where a pixel is
-        symmetric in ln λ about its centre as far as its other side allows.
+        Equal to the neighbouring `edges`, except beside a hole in the grid, where a pixel reaches
+        as far into the hole as the step on its other side says.
         """
         edges = self.edges
         lower, upper = edges[:-1].copy(), edges[1:].copy()
-        for i in self.jumps:
-            step = np.log(upper[i] / lower[i])
-            left = self.wavelength[i] / lower[i]  # > 1, the half pixel on the intact side
-            right = upper[i + 1] / self.wavelength[i + 1]
-            if step > 0.0 and left**2 < self.wavelength[i + 1] / self.wavelength[i]:
-                upper[i] = self.wavelength[i] * left
-            if right**2 < self.wavelength[i + 1] / self.wavelength[i]:
-                lower[i + 1] = self.wavelength[i + 1] / right
+        jumps = self.jumps
+        if jumps.size == 0:
+            return lower, upper
+        step = np.diff(np.log(self.wavelength))
+        step[jumps] = np.nan
+        # a pixel alone between two holes takes the typical width of the others
+        typical = float(np.nanmedian(step))
+        for i in jumps:
+            before = step[i - 1] if i > 0 and np.isfinite(step[i - 1]) else typical
+            after = step[i + 1] if i + 1 < step.size and np.isfinite(step[i + 1]) else typical
+            upper[i] = self.wavelength[i] * np.exp(0.5 * before)
+            lower[i + 1] = self.wavelength[i + 1] * np.exp(-0.5 * after)
+            if i == 0:
+                lower[i] = self.wavelength[i] * np.exp(-0.5 * before)
+            if i + 1 == step.size:
+                upper[i + 1] = self.wavelength[i + 1] * np.exp(0.5 * after)
         return lower, upper
 
     def velocity(self, lambda0: float) -> FloatArray:
@@ -371,6 +382,7 @@ class Spectrum:
         ------
         SpectrumError
             If ``lambda0`` is not positive and finite.
+
         """
         if not (np.isfinite(lambda0) and lambda0 > 0.0):
             raise SpectrumError(f"velocity scale: lambda0 must be positive, found {lambda0!r}")
@@ -383,6 +395,7 @@ class Spectrum:
         ------
         SpectrumError
             If the limits are not in order, or fewer than two pixels are left.
+
         """
         if not wave_lo < wave_hi:
             raise SpectrumError(

@@ -90,6 +90,7 @@ class WavelengthUnit:
         One of the plain names of `ALLOWED_UNITS`, without the logarithm.
     logarithm
         ``""``, ``"log10"`` or ``"ln"``.
+
     """
 
     name: str
@@ -123,6 +124,7 @@ def parse_unit(text: str, where: str) -> WavelengthUnit:
     ------
     SpectrumError
         If the text is no wavelength unit that is understood.
+
     """
     # NFKC would do more than wanted; the micro sign and the Ångström sign are the only doubles
     plain = text.strip().replace("\N{MICRO SIGN}", "μ").replace("\N{ANGSTROM SIGN}", "Å").casefold()
@@ -149,6 +151,7 @@ def guess_unit(values: NDArray[np.float64], where: str) -> tuple[WavelengthUnit,
     ------
     SpectrumError
         If the median fits no unit.
+
     """
     finite = values[np.isfinite(values)]
     median = float(np.median(finite)) if finite.size else float("nan")
