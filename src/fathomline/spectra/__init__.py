@@ -1,1 +1,33 @@
+"""Spectra: reading, wavelength media and frames, masks, line-spread functions, summaries."""
 
+from __future__ import annotations
+
+from fathomline.spectra.continuum import local_level, spectrum_level
+from fathomline.spectra.frames import barycentric_velocity, to_barycentric
+from fathomline.spectra.line_spread import GaussianLineSpread, LineSpread
+from fathomline.spectra.media import AIR_FORMULAS, air_to_vacuum, vacuum_to_air
+from fathomline.spectra.read import FRAMES, MEDIA, read_spectrum
+from fathomline.spectra.reading import Reading
+from fathomline.spectra.spectrum import Spectrum
+from fathomline.spectra.summary import SpectrumSummary, summarise
+from fathomline.spectra.units import ALLOWED_UNITS
+
+__all__ = [
+    "AIR_FORMULAS",
+    "ALLOWED_UNITS",
+    "FRAMES",
+    "MEDIA",
+    "GaussianLineSpread",
+    "LineSpread",
+    "Reading",
+    "Spectrum",
+    "SpectrumSummary",
+    "air_to_vacuum",
+    "barycentric_velocity",
+    "local_level",
+    "read_spectrum",
+    "spectrum_level",
+    "summarise",
+    "to_barycentric",
+    "vacuum_to_air",
+]
