@@ -222,11 +222,11 @@ def _stated_medium(raw: RawSpectrum) -> tuple[str, str] | None:
             return "air", key
         if value.startswith("vac"):
             return "vacuum", key
-    value = header.get("VACUUM")
-    text = str(value).strip().casefold()
-    if value is True or text in ("t", "true", "1", "yes"):
+    # a FITS logical arrives as bool, the same keyword in a text file as text
+    text = str(header.get("VACUUM", "")).strip().casefold()
+    if text in ("t", "true", "1", "yes"):
         return "vacuum", "VACUUM"
-    if value is False or text in ("f", "false", "0", "no"):
+    if text in ("f", "false", "0", "no"):
         return "air", "VACUUM"
     return None
 

@@ -246,6 +246,18 @@ def _axis(hdu: Any, name: str, where: str) -> FloatArray:
     return squeezed
 
 
+def _keyword(
+    header: Mapping[str, Any], key: str, where: str, default: float | None = None
+) -> float:
+    value = header.get(key, default)
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise SpectrumError(
+            f"{where}: the image has no wavelength scale: expected a number in {key}, found "
+            f"{value!r}. Write the spectrum as a table with a wavelength column"
+        )
+    return float(value)
+
+
 def image_wavelength(
     header: Mapping[str, Any], n: int, where: str
 ) -> tuple[FloatArray, str | None, str | None, str]:
@@ -279,19 +291,15 @@ def image_wavelength(
     """
     ctype = str(header.get("CTYPE1", "")).strip().upper()
     unit = str(header.get("CUNIT1", "")).strip() or None
-    step = header.get("CD1_1", header.get("CDELT1"))
-    start, reference = header.get("CRVAL1"), header.get("CRPIX1", 1.0)
-    for key, value in {"CRVAL1": start, "CDELT1 or CD1_1": step, "CRPIX1": reference}.items():
-        if isinstance(value, bool) or not isinstance(value, int | float):
-            raise SpectrumError(
-                f"{where}: the image has no wavelength scale: expected a number in {key}, found "
-                f"{value!r}. Write the spectrum as a table with a wavelength column"
-            )
-    if "CD1_1" not in header:
-        step = step * header.get("PC1_1", 1.0)
+    start = _keyword(header, "CRVAL1", where)
+    reference = _keyword(header, "CRPIX1", where, 1.0)
+    if "CD1_1" in header:
+        step = _keyword(header, "CD1_1", where)
+    else:
+        step = _keyword(header, "CDELT1", where) * _keyword(header, "PC1_1", where, 1.0)
     if step == 0:
         raise SpectrumError(f"{where}: the wavelength step (CDELT1 or CD1_1) is zero")
-    w = (np.arange(1, n + 1, dtype=np.float64) - float(reference)) * float(step)
+    w = (np.arange(1, n + 1, dtype=np.float64) - reference) * step
     kind, _, algorithm = ctype.partition("-")
     algorithm = algorithm.strip("-")
     medium = {"AWAV": "air", "WAVE": "vacuum"}.get(kind)
@@ -308,12 +316,12 @@ def image_wavelength(
     if algorithm == "LOG":
         if start == 0:
             raise SpectrumError(f"{where}: CRVAL1 = 0 is impossible with CTYPE1 = {ctype!r}")
-        return float(start) * np.exp(w / float(start)), unit, medium, "log-linear (CTYPE1)"
+        return start * np.exp(w / start), unit, medium, "log-linear (CTYPE1)"
     if header.get("DC-FLAG") in (1, "1"):
         if unit is None or "(" not in unit:
             unit = f"log10({unit})" if unit else "log10(Angstrom)"
-        return float(start) + w, unit, medium, "log-linear (DC-FLAG)"
-    return float(start) + w, unit, medium, "linear"
+        return start + w, unit, medium, "log-linear (DC-FLAG)"
+    return start + w, unit, medium, "linear"
 
 
 def _read_image(
