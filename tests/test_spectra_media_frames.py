@@ -88,7 +88,9 @@ def direct_velocity(sky, mjd, location):
         )
 
 
-@pytest.mark.parametrize(("ra", "dec", "mjd"), [(335.028, -28.056, 55360.33), (76.0, 44.0, 52000.1)])
+@pytest.mark.parametrize(
+    ("ra", "dec", "mjd"), [(335.028, -28.056, 55360.33), (76.0, 44.0, 52000.1)]
+)
 def test_barycentric_velocity_is_astropys(ra, dec, mjd):
     location = EarthLocation.from_geodetic(*PARANAL.values())
     expected = direct_velocity(SkyCoord(ra, dec, unit="deg"), mjd, location)
@@ -112,7 +114,7 @@ def test_barycentric_velocity_beyond_the_earth_orientation_tables_does_not_warn(
 )
 def test_barycentric_velocity_refuses(bad):
     good = {"ra_deg": 1.0, "dec_deg": 2.0, "mjd_utc_mid": 55360.0, **PARANAL}
-    with pytest.raises(SpectrumError, match="barycentric correction: .* is not between"):
+    with pytest.raises(SpectrumError, match=r"barycentric correction: .* is not between"):
         barycentric_velocity(**{**good, **bad})
 
 

@@ -261,9 +261,20 @@ def test_line_spread_refuses_negative_errors():
 
 @pytest.mark.parametrize(
     ("text", "name"),
-    [("Å", "Angstrom"), ("AA", "Angstrom"), ("\u212b", "Angstrom"), ("0.1nm", "Angstrom")]
-    + [("nanometer", "nm"), ("\u00b5m", "um"), ("\u03bcm", "um"), ("micron", "um"), ("M", "m")]
-    + [("log(Angstrom)", "log10(Angstrom)"), ("dex(AA)", "log10(Angstrom)"), ("ln(nm)", "ln(nm)")],
+    [
+        ("Å", "Angstrom"),
+        ("AA", "Angstrom"),
+        ("\u212b", "Angstrom"),
+        ("0.1nm", "Angstrom"),
+        ("nanometer", "nm"),
+        ("\u00b5m", "um"),
+        ("\u03bcm", "um"),
+        ("micron", "um"),
+        ("M", "m"),
+        ("log(Angstrom)", "log10(Angstrom)"),
+        ("dex(AA)", "log10(Angstrom)"),
+        ("ln(nm)", "ln(nm)"),
+    ],
 )
 def test_spellings_of_units(text, name):
     assert str(parse_unit(text, "f")) == name
@@ -313,7 +324,9 @@ def test_missing_specutils_is_told(monkeypatch):
 
 def test_specutils_round_trip():
     pytest.importorskip("specutils")
-    spectrum = Spectrum.from_arrays(log_linear(9), np.arange(9.0), np.ones(9), good=np.arange(9) > 2)
+    spectrum = Spectrum.from_arrays(
+        log_linear(9), np.arange(9.0), np.ones(9), good=np.arange(9) > 2
+    )
     back = Spectrum.from_specutils(spectrum.to_specutils())
     assert back.digest() == spectrum.digest()
     assert back.reading.guesses

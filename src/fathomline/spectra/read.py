@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 
 from fathomline.errors import SpectrumError
-from fathomline.spectra.columns import FloatArray, RawSpectrum, check_columns
+from fathomline.spectra.columns import GZIP_MAGIC, FloatArray, RawSpectrum, check_columns
 from fathomline.spectra.companions import add_companion
 from fathomline.spectra.frames import header_velocity, to_barycentric
 from fathomline.spectra.line_spread import LineSpread
@@ -173,7 +173,7 @@ def _probe(path: Path, where: str) -> tuple[str, bool]:
     if not content.strip():
         raise SpectrumError(f"{where}: the file is empty")
     digest = hashlib.sha256(content).hexdigest()
-    if content[:2] == b"\x1f\x8b":
+    if content[:2] == GZIP_MAGIC:
         import gzip
         import zlib
 

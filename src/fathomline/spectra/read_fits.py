@@ -15,6 +15,8 @@
 
 from __future__ import annotations
 
+import gzip
+import io
 import warnings
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
@@ -23,9 +25,10 @@ from typing import Any
 
 import numpy as np
 
-from fathomline.errors import SpectrumError
+from fathomline.errors import FathomlineError, SpectrumError
 from fathomline.spectra.columns import (
     COLUMN_NAMES,
+    GZIP_MAGIC,
     ROLES,
     FloatArray,
     RawSpectrum,
@@ -39,7 +42,7 @@ from fathomline.spectra.columns import (
     role_of,
 )
 
-__all__ = ["image_wavelength", "open_fits", "read_fits"]
+__all__ = ["header_values", "image_wavelength", "open_fits", "read_fits"]
 
 _TRUNCATED = ("truncated", "unexpected end of file")
 
@@ -63,24 +66,35 @@ def open_fits(path: Path, where: str, notes: list[str]) -> Iterator[Any]:
     """
     from astropy.io import fits
 
+    def fault(exc: Exception) -> SpectrumError:
+        return SpectrumError(
+            f"{where}: the FITS file cannot be read, it may be truncated or damaged; copy it again "
+            f"from its origin ({type(exc).__name__}: {' '.join(str(exc).split())})"
+        )
+
     with warnings.catch_warnings(record=True) as caught:
         warnings.simplefilter("always")
         try:
-            hdus = fits.open(path, memmap=False, lazy_load_hdus=False)
+            content = path.read_bytes()
+            if content[:2] == GZIP_MAGIC:
+                content = gzip.decompress(content)
+            # from memory, because astropy leaves the files open that it fails on
+            hdus = fits.open(io.BytesIO(content), lazy_load_hdus=False)
             for hdu in hdus:
                 _ = hdu.data  # a truncated file shows only when its data are read
         except Exception as exc:  # astropy raises many types for a damaged file
-            raise SpectrumError(
-                f"{where}: the FITS file cannot be read, it may be truncated or damaged; "
-                f"copy it again from its origin ({type(exc).__name__}: {exc})"
-            ) from exc
+            raise fault(exc) from exc
         texts = [str(entry.message) for entry in caught]
-        with hdus:
-            if any(word in text for text in texts for word in _TRUNCATED):
-                raise SpectrumError(
-                    f"{where}: the FITS file is truncated; copy it again from its origin"
-                )
+        if any(word in text for text in texts for word in _TRUNCATED):
+            raise SpectrumError(
+                f"{where}: the FITS file is truncated; copy it again from its origin"
+            )
+        try:
             yield hdus
+        except FathomlineError:
+            raise
+        except Exception as exc:  # columns and cards are parsed late
+            raise fault(exc) from exc
     for entry in caught:
         text = " ".join(str(entry.message).split())
         note = f"while the FITS file was read: {text}"
@@ -88,13 +102,19 @@ def open_fits(path: Path, where: str, notes: list[str]) -> Iterator[Any]:
             notes.append(note)
 
 
-def _header(*hdus: Any) -> dict[str, Any]:
-    """Return keywords of all HDUs; later ones override, for extensions state more precisely."""
+def header_values(notes: list[str], *hdus: Any) -> dict[str, Any]:
+    """Return upper-case keyword to value of all HDUs; cards that cannot be parsed become notes.
+
+    Later HDUs override, because extensions state more precisely than the primary header.
+    """
     result: dict[str, Any] = {}
     for hdu in hdus:
         for card in hdu.header.cards:
-            if card.keyword and card.keyword not in ("COMMENT", "HISTORY"):
-                result[card.keyword.upper()] = card.value
+            try:
+                if card.keyword and card.keyword not in ("COMMENT", "HISTORY"):
+                    result[card.keyword.upper()] = card.value
+            except Exception as exc:  # one bad card does not spoil the numbers
+                notes.append(f"a header card was not used: {' '.join(str(exc).split())}")
     return result
 
 
@@ -157,11 +177,13 @@ def _read_table(
         tables[0],
     )
     names = list(table.columns.names)
-    header = _header(primary, table)
     required = ROLES[:2] if error_elsewhere else ROLES[:3]
-    chosen, guesses, notes = choose_columns(
-        names, columns, where, required=required, hints=_hints(table.header, names)
+    notes: list[str] = []
+    header = header_values(notes, primary, table)
+    chosen, guesses, more = choose_columns(
+        names, columns, where, required=required, hints=_hints(header, names)
     )
+    notes.extend(more)
     rows = len(table.data)
     if rows == 0:
         raise SpectrumError(f"{where}: the table {table.name or 'in the file'} has zero rows")
@@ -211,7 +233,7 @@ def _read_table(
     )
 
 
-def _hints(header: Any, names: list[str]) -> dict[str, int]:
+def _hints(header: Mapping[str, Any], names: list[str]) -> dict[str, int]:
     """Return roles stated by TUTYPn keywords."""
     hints: dict[str, int] = {}
     for i in range(len(names)):
@@ -364,7 +386,8 @@ def _read_image(
         )
     main = found["flux"]
     flux = _axis(main, "the flux image", where)
-    header = _header(primary, main) if main is not primary else _header(main)
+    notes: list[str] = []
+    header = header_values(notes, primary, *([] if main is primary else [main]))
     wavelength, unit, medium, scale = image_wavelength(header, flux.size, where)
     guesses, steps = [], []
     values: dict[str, FloatArray] = {}
@@ -392,6 +415,6 @@ def _read_image(
         medium=(medium, "CTYPE1") if medium else None,
         header=header,
         guesses=guesses,
-        warnings=[],
+        warnings=notes,
         steps=steps,
     )

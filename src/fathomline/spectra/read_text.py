@@ -21,6 +21,7 @@ import numpy as np
 
 from fathomline.errors import SpectrumError
 from fathomline.spectra.columns import (
+    GZIP_MAGIC,
     ROLES,
     FloatArray,
     RawSpectrum,
@@ -148,7 +149,7 @@ def read_text_table(path: Path, where: str) -> TextTable:
     """
     try:
         data = path.read_bytes()
-        if data[:2] == b"\x1f\x8b":
+        if data[:2] == GZIP_MAGIC:
             data = gzip.decompress(data)
         text = data.decode("utf-8-sig")
     except (UnicodeDecodeError, EOFError, OSError) as exc:

@@ -15,8 +15,8 @@ with L_k the matrix that has ones on its k-th upper diagonal and T_m the one wit
 diagonals (T_0 = 1). Solving this with the sums over all quiet blocks gives γ, and the correlations
 are γ_1/γ_0 and γ_2/γ_0. A block is quiet when its S_0 is below 1.5 times the 30th percentile of all
 blocks: that keeps absorption and defects out, and is relative to the spectrum because its errors
-may be wrong by a factor. The limit also drops the noisiest blocks of pure noise, which lowers a true
-correlation of 0.15 by 0.01. With fewer than eight quiet blocks there is no estimate.
+may be wrong by a factor. The limit also drops the noisiest blocks of pure noise, which lowers a
+true correlation of 0.15 by 0.01. With fewer than eight quiet blocks there is no estimate.
 """
 
 from __future__ import annotations
