@@ -5,6 +5,8 @@ from __future__ import annotations
 import dataclasses
 import hashlib
 import json
+import pickle
+import subprocess
 import sys
 
 import numpy as np
@@ -227,6 +229,21 @@ def test_digest_depends_on_every_array_and_on_nothing_else():
     assert len({s.digest() for s in [base, *others]}) == 6
     same = Spectrum.from_arrays([3, 2, 1], [1, 1, 1], [1, 1, 1], name="x")
     assert same.digest() == base.digest()
+
+
+def test_spectra_travel_to_worker_processes():
+    spectrum = simple(lsf=GaussianLineSpread(5.0))
+    there = pickle.loads(pickle.dumps(spectrum))
+    assert there.digest() == spectrum.digest()
+    assert there.reading == spectrum.reading
+    assert there.lsf == spectrum.lsf
+    assert not there.flux.flags.writeable
+
+
+def test_importing_the_room_imports_no_astropy():
+    code = "import sys, fathomline.spectra; print([m for m in sys.modules if 'astropy' in m])"
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "[]"
 
 
 def test_repr_is_short_and_never_raises():

@@ -208,6 +208,13 @@ class Spectrum:
         if self.lsf is not None and not isinstance(self.lsf, LineSpread):
             raise SpectrumError(f"{where}: lsf must be a line-spread function or None")
 
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        # numpy forgets that an array was read-only when it travels to a worker process
+        for key, values in state.items():
+            if isinstance(values, np.ndarray):
+                _freeze(values)
+            object.__setattr__(self, key, values)
+
     @classmethod
     def from_arrays(
         cls,
