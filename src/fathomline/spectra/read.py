@@ -171,7 +171,10 @@ def _probe(path: Path, where: str) -> tuple[str, bool]:
     except OSError as exc:
         raise SpectrumError(f"{where}: the file cannot be read: {exc}") from exc
     if not content.strip():
-        raise SpectrumError(f"{where}: the file is empty")
+        raise SpectrumError(
+            f"{where}: the file is empty; expected a FITS file, or text with wavelength, flux and "
+            "error columns"
+        )
     digest = hashlib.sha256(content).hexdigest()
     if content[:2] == GZIP_MAGIC:
         import gzip
