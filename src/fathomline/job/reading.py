@@ -28,6 +28,7 @@ MAXIMUM_BYTES = 5_000_000
 MAXIMUM_FAULTS = 100
 
 _ARRAYS = ("spectrum", "region", "component", "distortion", "blend")
+_TABLES = ("absorber", "atomic", "alpha", "fit", "structure", "budget")
 _FILE_KEYS = ("file", "error_file", "continuum_file")
 
 
@@ -195,18 +196,18 @@ def _subject(path: KeyPath) -> str:
         if rest and isinstance(rest[0], int):
             table += f" {rest[0] + 1}"
             del rest[0]
-    elif len(path) == 1 and section not in ("absorber", "atomic", "alpha", "fit"):
+    elif len(path) == 1 and section not in _TABLES:
         return _shown(section)
     else:
         table = f"[{section}]"
     words = ""
-    for part in rest:
+    for previous, part in zip([None, *rest], rest, strict=False):
         if isinstance(part, int):
             words += f"[{part + 1}]"
-        elif part.replace("_", "").isalnum():
-            words += f".{part}" if words else part
+        elif previous == "logN":
+            words += f'["{part}"]'  # as references write ions
         else:
-            words += f'["{part}"]'
+            words += f".{part}" if words else part
     return f"{table} {_shown(words)}" if words else table
 
 

@@ -95,8 +95,11 @@ def faults_of(error: ValidationError) -> list[Fault]:
     """The faults that a failed validation found."""
     found = []
     for detail in error.errors(include_url=False, include_context=False, include_input=False):
+        path = detail["loc"]
+        if path and path[-1] == "[key]":
+            path = path[:-1]  # pydantic's mark for the key, not the value, of a mapping
         missing = detail["type"] == "missing"
-        found.append(Fault(detail["loc"], "missing" if missing else detail["msg"]))
+        found.append(Fault(path, "missing" if missing else detail["msg"]))
     return found
 
 
@@ -233,7 +236,7 @@ class Table(BaseModel):
                 continue
             # A key may be of any length; the distance to a valid one does not need all of it.
             shown = key if len(key) <= 40 else key[:37] + "..."
-            near = difflib.get_close_matches(shown.lower(), [k.lower() for k in keys], n=1)
+            near = difflib.get_close_matches(shown.lower(), [k.lower() for k in keys], 1, 0.5)
             if near:
                 nearest = next(k for k in keys if k.lower() == near[0])
                 cure = f"did you mean {nearest!r}?"

@@ -265,7 +265,7 @@ class _Scanner:
             self._entries[path] = index + 1
             path = (*path, index)
         elif path in self._headers:
-            header = "[" + ".".join(parts) + "]"
+            header = repr("[" + ".".join(parts) + "]")[1:-1]  # one line in any case
             self.repeated.append((f"table {header}", self._headers[path], line))
         else:
             self._headers[path] = line
