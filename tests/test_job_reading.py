@@ -187,6 +187,7 @@ ZOO = [
     ({33: "b = { value = 4, tied = 1 }"}, 33, "'b.tied': unknown key 'tied'"),
     ({33: "b = { value = 4, ratio = 2 }"}, 33, "'ratio' goes only with same_as"),
     ({34: "logN = {}", 40: 'logN = { "Mg II" = 1e1, "Fe II" = 9 }'}, 34, "names no ion"),
+    ({34: "logN = 12.9"}, 34, "expected a table of ions such as"),
     ({34: 'logN = { "Fe II" = 12.9, "MgII" = 13 }'}, 34, 'expected an ion such as "Fe II"'),
     ({34: 'logN = { "Fe II" = "x", "Mg II" = 13 }'}, 34, "'logN[\"Fe II\"]': expected a number"),
     ({34: 'logN = { "Fe II" = 30, "Mg II" = 13 }'}, 34, "30 is outside the default bounds 5 to"),
@@ -329,12 +330,12 @@ def test_chains_of_ties_and_their_start_values():
         "component[2].b_turb",
         'component[2].logN["Fe II"]',
     ]
-    assert job.start_value(Reference.parse("component[2].velocity")) == 2 * -12.3 + 30
-    assert job.start_value(Reference.parse("component[1].logN['Mg II']")) == 12.9 - 1 + 1
+    starts = job.start_values()
+    assert set(starts) == set(numbers)
+    assert starts[Reference.parse("component[2].velocity")] == 2 * -12.3 + 30
+    assert starts[Reference.parse("component[1].logN['Mg II']")] == 12.9 - 1 + 1
     assert numbers[Reference.parse("spectrum[1].fwhm")].is_free
     assert numbers[Reference.parse("component[1].b")].bounds("b") == (0.3, 100.0)
-    with pytest.raises(KeyError, match=r"component\[7\]"):
-        job.start_value(Reference("component", 6, "b"))
     # Each number is where its reference says, in the data and in the file.
     for reference in numbers:
         if reference.section != "alpha":
@@ -413,6 +414,8 @@ def test_a_flood_of_faults_is_cut_short():
     flood = "".join(f"key{number} = 1\n" for number in range(3000))
     faults = faults_in("schema = 1\n" + flood)
     assert any("2980 more unknown keys" in message for message in faults)
+    faults = faults_in("schema = 1\n" + "[[region]]\n" * 2001)
+    assert "halden.toml:2: [[region]]: 2001 entries; a job has at most 2000" in faults
     entries = "[[region]]\n" * 500
     faults = faults_in("schema = 1\n" + entries)
     assert len(faults) == 101
@@ -425,6 +428,39 @@ def test_data_in_memory_is_checked_alike():
     data["component"][0]["b"] = -1
     with pytest.raises(JobError, match=r"^variant: \[\[component\]\] 1 'b': must be above 0"):
         build_job(data, name="variant")
+
+
+JUNK = [
+    *(None, True, 0, -1, 1e308, float("nan"), 10**400, "", "x", "Fe II", "${A", b"x", object()),
+    *([], [[]], {}, [1, 2], [{}], [None], {1: 2}, {"Fe II": 1}, {"value": {"value": 1}}),
+    *({"same_as": 3}, {"same_as": "component[1].b"}, {"same_as": "x"}),
+]
+
+
+def paths_in(data):
+    for key, value in data.items() if isinstance(data, dict) else enumerate(data):
+        yield (key,)
+        if isinstance(value, dict | list):
+            yield from ((key, *rest) for rest in paths_in(value))
+
+
+@pytest.mark.parametrize("junk", JUNK, ids=lambda value: type(value).__name__)
+def test_junk_in_any_place_is_a_fault_or_fits(junk):
+    job = parse_job(EXAMPLE, "halden.toml", check_files=False)
+    for path in paths_in(job_to_data(job)):
+        data = job_to_data(job)
+        parent = data
+        for part in path[:-1]:
+            parent = parent[part]
+        parent[path[-1]] = junk
+        try:
+            build_job(data)
+        except JobError as error:
+            for message in error.faults:
+                assert message.startswith("job: ")
+                assert len(message) < 250
+                assert "\n" not in message
+                assert "Input should" not in message  # wording that is not ours
 
 
 def test_reading_jobs_does_not_load_numerical_packages():

@@ -15,7 +15,13 @@ from pydantic import ValidationError
 
 from fathomline.errors import JobError
 from fathomline.job.paths import absolute_path
-from fathomline.job.schema import SUPPORTED_SCHEMAS, Job, attach, unsupported_schema
+from fathomline.job.schema import (
+    MAXIMUM_ENTRIES,
+    SUPPORTED_SCHEMAS,
+    Job,
+    attach,
+    unsupported_schema,
+)
 from fathomline.job.table import Fault, faults_of
 from fathomline.job.toml_source import KeyPath, TomlSource, parse_toml
 
@@ -145,7 +151,9 @@ def _checked(data: Mapping[str, Any], source: TomlSource, check_files: bool) -> 
 def _file_faults(data: Mapping[str, Any], folder: Path) -> Iterator[Fault]:
     """Data files that do not exist; looks at raw data, so that other faults do not hide these."""
     entries = data.get("spectrum")
-    for index, entry in enumerate(entries if isinstance(entries, list) else []):
+    if not isinstance(entries, list) or len(entries) > MAXIMUM_ENTRIES:
+        return
+    for index, entry in enumerate(entries):
         for key in _FILE_KEYS if isinstance(entry, Mapping) else ():
             text = entry.get(key)
             if not isinstance(text, str) or not text.strip():

@@ -227,10 +227,13 @@ class Table(BaseModel):
         return f"expected a table, found {describe(data)}"
 
     @classmethod
-    def _unknown_keys(cls, data: Mapping[str, Any]) -> Iterator[Fault]:
+    def _unknown_keys(cls, data: Mapping[Any, Any]) -> Iterator[Fault]:
         keys = cls.keys()
         unknown = [key for key in data if key not in keys]
         for key in unknown[:_UNKNOWN_KEYS_SHOWN]:
+            if not isinstance(key, str):
+                yield Fault((), f"expected text as a key, found {describe(key)}")
+                continue
             if key in cls.later_keys:
                 yield Fault((key,), "not available in this version")
                 continue
@@ -245,4 +248,6 @@ class Table(BaseModel):
             yield Fault((key,), f"unknown key {shown!r}; {cure}")
         if len(unknown) > _UNKNOWN_KEYS_SHOWN:
             rest = len(unknown) - _UNKNOWN_KEYS_SHOWN
-            yield Fault((unknown[_UNKNOWN_KEYS_SHOWN],), f"{rest} more unknown keys from here on")
+            yield Fault(
+                (str(unknown[_UNKNOWN_KEYS_SHOWN]),), f"{rest} more unknown keys from here on"
+            )
