@@ -73,7 +73,7 @@ def _line_spread(table: SpectrumTable, job: Job, index: int) -> GaussianLineSpre
     if resolution.R is not None:
         return GaussianLineSpread.from_resolving_power(resolution.R, resolution.error)
     return GaussianLineSpread(
-        job.start_value(Reference("spectrum", index, "fwhm")), resolution.error
+        job.start_values()[Reference("spectrum", index, "fwhm")], resolution.error
     )
 
 
@@ -131,6 +131,7 @@ class _Builder:
 
     def __init__(self, job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> None:
         self.job, self.spectra, self.atoms = job, spectra, atoms
+        self.start = job.start_values()
         self.parameters: list[Parameter] = []
         self.faults: list[str] = []
         self.bounds = {s.name: s.bounds() for s in spectra}
@@ -182,7 +183,7 @@ class _Builder:
                     f"transition of {ion}; add one or remove the entry",
                     "component", k, "logN", ion,
                 )
-        velocity = self.job.start_value(Reference("component", k, "velocity"))
+        velocity = self.start[Reference("component", k, "velocity")]
         inside = any(r.window[0] <= velocity <= r.window[1] for r in mine)
         if mine and not inside:
             self.fault(
@@ -351,7 +352,7 @@ class _Builder:
         centre: float, wavelength: NDArray[np.float64],
     ) -> bool:
         def value(quantity: str, ion: str | None = None) -> float:
-            return self.job.start_value(Reference("component", k, quantity, ion))
+            return self.start[Reference("component", k, quantity, ion)]
 
         if component.b is not None:
             b = value("b")

@@ -50,8 +50,10 @@ class Noise:
 def clouds_of(job: Job) -> list[Cloud]:
     """The components of a job at their start values."""
 
+    start = job.start_values()
+
     def value(k: int, quantity: str, ion: str | None = None) -> float:
-        return job.start_value(Reference("component", k, quantity, ion))
+        return start[Reference("component", k, quantity, ion)]
 
     def cloud(k: int, component: Component) -> Cloud:
         width = "b" if component.b is not None else "b_turb"
@@ -155,7 +157,8 @@ def simulate(
     tuple of Spectrum
         Flux 1 in the continuum, continuum column included.
     """
-    alpha = job.start_value(Reference("alpha", 0, "dalpha")) if dalpha_ppm is None else dalpha_ppm
+    start = job.start_values()
+    alpha = start[Reference("alpha", 0, "dalpha")] if dalpha_ppm is None else dalpha_ppm
     clouds = clouds_of(job) if clouds is None else clouds
     children = np.random.SeedSequence(noise.seed).spawn(len(job.spectra))
     spectra = []
@@ -164,7 +167,7 @@ def simulate(
         if resolution.R is not None:
             fwhm = C_KMS / resolution.R
         else:
-            fwhm = job.start_value(Reference("spectrum", i, "fwhm"))
+            fwhm = start[Reference("spectrum", i, "fwhm")]
         flux = _transmission(job.absorber.redshift, clouds, atoms, pixels, fwhm, alpha)
         sigma = np.full(flux.size, 1e-4 if math.isinf(noise.snr) else 1.0 / noise.snr)
         if not math.isinf(noise.snr):
