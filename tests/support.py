@@ -106,3 +106,21 @@ def small_model(*, structure: str = "isotopic", seed: int = 3, noise: float = 0.
             window=(-80.0, 80.0), rest=transition.wavelength,
         ))
     return AbsorberModel(redshift, ParameterSet(parameters), alpha, components, segments)
+
+
+def single_line_model(transition, wave, low, high, *, redshift, velocity, b, logn, fwhm, dalpha):
+    """One component in one transition, continuum held at 1."""
+    parameters = [
+        Parameter("dalpha", dalpha),
+        Parameter("fwhm", fwhm, fixed=True),
+        Parameter("v", velocity),
+        Parameter("b", b),
+        Parameter("logN", logn),
+    ]
+    segment = SegmentTerms(
+        0, transition.name, "one", wave, low, high, np.ones(wave.size), np.full(wave.size, 0.01),
+        np.ones(wave.size, dtype=bool), ((transition.ion, TransitionLines(transition)),),
+        continuum=(), zero_level=None, fwhm=1, window=(-1.0, 1.0), rest=transition.wavelength,
+    )
+    component = ComponentTerms(2, {transition.ion: 4}, b=3)
+    return AbsorberModel(redshift, ParameterSet(parameters), 0, [component], [segment])

@@ -19,8 +19,9 @@ k_j = c/b_j the derivatives are sums over four functions of each line,
 for a parameter p of the width with b' = ∂b_j/∂p, so that one small matrix product forms them all.
 
 Work is done where a line absorbs. Within 8 Doppler widths of the lines the four functions are
-evaluated for every line; in the wings one composite line stands for all, by the asymptotic
-series, which changes τ by less than 1e-7 of its central value.
+evaluated in full; in the wings by the asymptotic series. There one composite line stands for all
+when their spread (variance σ² in Doppler widths) changes the wing by less than 1e-8 in τ: the
+wing a τ0/(√π u²) of a spread line is larger by the factor 1 + 3σ²/u².
 """
 
 from __future__ import annotations
@@ -42,6 +43,8 @@ Array = NDArray[np.float64]
 
 # Γ [1/s] λ [Å] / (4π b [km/s]) without unit: 1e-10 m per Å, 1e3 m/s per km/s
 _DAMPING = 1e-13 / (4.0 * math.pi)
+
+_WING_TOLERANCE = 1e-8  # of the optical depth
 
 
 @dataclass(frozen=True, slots=True)
@@ -157,16 +160,22 @@ class TransitionLines:
             values = self._values(grid.inverse[first:last], s, b, x, rest, strength, slopes,
                                   core=True)
             yield slice(first, last), values
-        wings = [slice(0, first), slice(last, grid.inverse.size)]
-        if any(w.stop > w.start for w in wings):
+        wings = [w for w in (slice(0, first), slice(last, grid.inverse.size)) if w.stop > w.start]
+        if wings and self._merges_in_wings(rest, b, strength):
             share = self._share
-            middle = np.array([share @ rest]), np.array([strength.sum()])
-            width = np.array([share @ b])
-            thin = None if slopes is None else (slopes @ share)[:, None]
-            for wing in wings:
-                if wing.stop > wing.start:
-                    yield wing, self._values(grid.inverse[wing], s, width, x, *middle, thin,
-                                             core=False)
+            rest, strength = np.array([share @ rest]), np.array([strength.sum()])
+            b = np.array([share @ b])
+            slopes = None if slopes is None else (slopes @ share)[:, None]
+        for wing in wings:
+            yield wing, self._values(grid.inverse[wing], s, b, x, rest, strength, slopes,
+                                     core=False)
+
+    def _merges_in_wings(self, rest: Array, b: Array, strength: Array) -> bool:
+        mean = self._share @ rest
+        spread = C_KMS / b.min() * (rest / mean - 1.0)
+        factor = 3.0 * float(self._share @ spread**2) / CORE**4 / math.sqrt(math.pi)
+        damped = strength.sum() * (mean / b.min()) ** 2 * self._gamma * _DAMPING
+        return factor * damped < _WING_TOLERANCE
 
     def _values(
         self,
