@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import scipy.optimize
-from support import small_model
 
 from fathomline.fit import (
     FitSettings,
@@ -17,6 +16,7 @@ from fathomline.fit import (
     to_lmfit,
 )
 from fathomline.fit.covariance import AT_BOUND, SINGULAR
+from support import small_model
 
 INF = np.inf
 
@@ -34,13 +34,17 @@ def rosenbrock(x):
 def powell_singular(x):
     # problem 13 of the same paper: minimum 0 at 0, singular Jacobian there
     a, b = np.sqrt(5.0), np.sqrt(10.0)
-    r = np.array([x[0] + 10 * x[1], a * (x[2] - x[3]), (x[1] - 2 * x[2]) ** 2, b * (x[0] - x[3]) ** 2])
-    j = np.array([
-        [1, 10, 0, 0],
-        [0, 0, a, -a],
-        [0, 2 * (x[1] - 2 * x[2]), -4 * (x[1] - 2 * x[2]), 0],
-        [2 * b * (x[0] - x[3]), 0, 0, -2 * b * (x[0] - x[3])],
-    ])
+    r = np.array(
+        [x[0] + 10 * x[1], a * (x[2] - x[3]), (x[1] - 2 * x[2]) ** 2, b * (x[0] - x[3]) ** 2]
+    )
+    j = np.array(
+        [
+            [1, 10, 0, 0],
+            [0, 0, a, -a],
+            [0, 2 * (x[1] - 2 * x[2]), -4 * (x[1] - 2 * x[2]), 0],
+            [2 * b * (x[0] - x[3]), 0, 0, -2 * b * (x[0] - x[3])],
+        ]
+    )
     return r, j
 
 
@@ -61,10 +65,42 @@ def test_powell_singular():
 # b1 = 2.3894212918E+02 (sd 2.7070075241E+00), b2 = 5.5015643181E-04 (7.2668688436E-06),
 # residual sum of squares 1.2455138894E-01, 12 degrees of freedom; from memory of the NIST page,
 # confirmed here by scipy below
-MISRA_Y = np.array([10.07, 14.73, 17.94, 23.93, 29.61, 35.18, 40.02, 44.82, 50.76, 55.05, 61.01,
-                    66.40, 75.47, 81.78])
-MISRA_X = np.array([77.6, 114.9, 141.1, 190.8, 239.9, 289.0, 332.8, 378.4, 434.8, 477.3, 536.8,
-                    593.1, 689.1, 760.0])
+MISRA_Y = np.array(
+    [
+        10.07,
+        14.73,
+        17.94,
+        23.93,
+        29.61,
+        35.18,
+        40.02,
+        44.82,
+        50.76,
+        55.05,
+        61.01,
+        66.40,
+        75.47,
+        81.78,
+    ]
+)
+MISRA_X = np.array(
+    [
+        77.6,
+        114.9,
+        141.1,
+        190.8,
+        239.9,
+        289.0,
+        332.8,
+        378.4,
+        434.8,
+        477.3,
+        536.8,
+        593.1,
+        689.1,
+        760.0,
+    ]
+)
 
 
 def misra(p):
@@ -100,8 +136,13 @@ def test_bounded_problems_agree_with_scipy(seed):
 
     ours = minimise(function, np.zeros(n), lower, upper)
     theirs = scipy.optimize.least_squares(
-        lambda x: function(x)[0], np.zeros(n), lambda x: function(x)[1], (lower, upper),
-        xtol=1e-14, ftol=1e-14, gtol=1e-14,
+        lambda x: function(x)[0],
+        np.zeros(n),
+        lambda x: function(x)[1],
+        (lower, upper),
+        xtol=1e-14,
+        ftol=1e-14,
+        gtol=1e-14,
     )
     assert ours.converged
     assert np.all((ours.x >= lower) & (ours.x <= upper))
@@ -123,8 +164,9 @@ def test_covariance_of_a_straight_line():
     covariance = covariance_from_jacobian(jacobian, ("a", "b"), np.zeros(2, dtype=bool))
     s, sx, sxx = 50 / 0.09, x.sum() / 0.09, (x**2).sum() / 0.09
     delta = s * sxx - sx**2
-    np.testing.assert_allclose(covariance.matrix, np.array([[sxx, -sx], [-sx, s]]) / delta,
-                               rtol=1e-12)
+    np.testing.assert_allclose(
+        covariance.matrix, np.array([[sxx, -sx], [-sx, s]]) / delta, rtol=1e-12
+    )
     doubled = covariance_from_jacobian(jacobian / 2, ("a", "b"), np.zeros(2, dtype=bool))
     np.testing.assert_allclose(doubled.sigmas, 2 * covariance.sigmas, rtol=1e-12)
 

@@ -1,4 +1,4 @@
-"""The house keeps its rules: imports point one way, files stay small, names are public on purpose."""
+"""The house keeps its rules: imports point one way, files stay small, `__all__` everywhere."""
 
 from __future__ import annotations
 
@@ -13,8 +13,20 @@ SOURCE = Path(__file__).parent.parent / "src" / "fathomline"
 FILES = sorted(SOURCE.rglob("*.py"))
 
 # From the top of the house downwards: a room imports only from those before it
-ROOMS = ["constants", "errors", "atomic", "spectra", "profile", "model", "fit", "budget", "sample",
-         "job", "report", "cli"]
+ROOMS = [
+    "constants",
+    "errors",
+    "atomic",
+    "spectra",
+    "profile",
+    "model",
+    "fit",
+    "budget",
+    "sample",
+    "job",
+    "report",
+    "cli",
+]
 
 
 def room_of(path: Path) -> str:

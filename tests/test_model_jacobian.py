@@ -4,17 +4,26 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from support import ridders, small_model
 
 from fathomline.profile import TransitionLines
+from support import ridders, small_model
 
 # Steps: about a tenth of the distance over which the model changes its shape
-STEPS = {"dalpha_ppm": 20.0, "fwhm": 0.2, "v": 0.3, "b": 0.3, "T": 2e3, "M": 0.05, "F": 0.05,
-         "c": 0.1, "z": 0.1}
+STEPS = {
+    "dalpha_ppm": 20.0,
+    "fwhm": 0.2,
+    "v": 0.3,
+    "b": 0.3,
+    "T": 2e3,
+    "M": 0.05,
+    "F": 0.05,
+    "c": 0.1,
+    "z": 0.1,
+}
 
 
 def step_of(name: str) -> float:
-    return STEPS.get(name, STEPS[name[0]] if name[0] in STEPS else 0.1)
+    return STEPS.get(name, STEPS.get(name[0], 0.1))
 
 
 @pytest.mark.parametrize("structure", ["isotopic", "composite"])

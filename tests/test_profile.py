@@ -7,17 +7,53 @@ import math
 import mpmath
 import numpy as np
 import pytest
-from support import ridders
 
 from fathomline.atomic import LineComponent, Transition
 from fathomline.job.synthesis import Cloud, equivalent_width
 from fathomline.profile import FineGrid, TransitionLines, voigt, voigt_core, voigt_wing
+from support import ridders
 
 A_GRID = [0.0, 1e-8, 1e-6, 1e-5, 1e-4, 5e-4, 1e-3, 3e-3, 0.01, 0.03, 0.1, 0.3, 1.0, 3.0, 10.0]
-U_GRID = sorted({
-    0.0, 1e-6, 1e-3, 0.1, 0.3, 0.7, 1.0, 1.3, 1.7, 2.0, 2.4, 2.8, 3.1, 3.5, 3.9, 4.3, 4.7, 5.1, 5.5,
-    5.9, 6.0, 6.5, 7.0, 8.0, 9.5, 11.0, 14.0, 18.0, 25.0, 27.9, 28.1, 40.0, 70.0, 100.0, 300.0, 1e3,
-})
+U_GRID = sorted(
+    {
+        0.0,
+        1e-6,
+        1e-3,
+        0.1,
+        0.3,
+        0.7,
+        1.0,
+        1.3,
+        1.7,
+        2.0,
+        2.4,
+        2.8,
+        3.1,
+        3.5,
+        3.9,
+        4.3,
+        4.7,
+        5.1,
+        5.5,
+        5.9,
+        6.0,
+        6.5,
+        7.0,
+        8.0,
+        9.5,
+        11.0,
+        14.0,
+        18.0,
+        25.0,
+        27.9,
+        28.1,
+        40.0,
+        70.0,
+        100.0,
+        300.0,
+        1e3,
+    }
+)
 
 
 def exact_faddeeva(a: float, u: float) -> mpmath.mpc:
@@ -28,7 +64,7 @@ def exact_faddeeva(a: float, u: float) -> mpmath.mpc:
             # erfc and exp over- and underflow by thousands of digits there: continued fraction
             # DLMF 7.9.4, w(z) = (i/√π) / (z − (1/2)/(z − 1/(z − (3/2)/(z − ...))))
             if a == 0.0:
-                return mpmath.mpc(mpmath.exp(-z.real**2), _dawson(u))
+                return mpmath.mpc(mpmath.exp(-(z.real**2)), _dawson(u))
             tail = z
             for k in range(400, 0, -1):
                 tail = z - mpmath.mpf(k) / 2 / tail
@@ -110,14 +146,27 @@ def test_wings_join_the_core(a):
 
 # Half curve-of-growth integrals, W/λ = 2 (b/c) F (Tatum, Stellar Atmospheres, §11.4 and §11.6)
 GAUSSIAN_GROWTH = [
-    (0.01, 0.00883102149402), (0.1, 0.0855728706534), (0.5, 0.374382891502),
-    (1.0, 0.642572260479), (2.0, 0.986344333126), (5.0, 1.41237272661), (10.0, 1.65687666918),
-    (100.0, 2.26027922556), (1000.0, 2.72643656471), (1e5, 3.47241680351),
+    (0.01, 0.00883102149402),
+    (0.1, 0.0855728706534),
+    (0.5, 0.374382891502),
+    (1.0, 0.642572260479),
+    (2.0, 0.986344333126),
+    (5.0, 1.41237272661),
+    (10.0, 1.65687666918),
+    (100.0, 2.26027922556),
+    (1000.0, 2.72643656471),
+    (1e5, 3.47241680351),
 ]
 VOIGT_GROWTH = [  # tau(u) = tau0 H(a,u)/H(a,0); six digits trusted
-    (1e-4, 1.0, 0.6426559), (1e-4, 100.0, 2.2632499), (1e-4, 1e4, 3.3130965),
-    (1e-3, 1.0, 0.64340885), (1e-3, 100.0, 2.289929), (1e-3, 1e4, 4.8584485),
-    (1e-2, 1.0, 0.65095475), (1e-2, 100.0, 2.5512603), (1e-2, 1e4, 13.478322),
+    (1e-4, 1.0, 0.6426559),
+    (1e-4, 100.0, 2.2632499),
+    (1e-4, 1e4, 3.3130965),
+    (1e-3, 1.0, 0.64340885),
+    (1e-3, 100.0, 2.289929),
+    (1e-3, 1e4, 4.8584485),
+    (1e-2, 1.0, 0.65095475),
+    (1e-2, 100.0, 2.5512603),
+    (1e-2, 1e4, 13.478322),
 ]
 
 
@@ -125,8 +174,19 @@ def line_with(a: float, tau0: float, b: float) -> tuple[Transition, float]:
     """A made-up line of 2000 Å and the log N that give damping a and central depth tau0."""
     wavelength, f = 2000.0, 0.1
     gamma = a * 4.0 * math.pi * (b * 1e3) / (wavelength * 1e-10)
-    line = Transition("X I", "2000", "X", 20.0, 1e8 / wavelength, None, f, gamma, 0.0, None,
-                      structure=(LineComponent(1e8 / wavelength, 1.0, 20.0),))
+    line = Transition(
+        "X I",
+        "2000",
+        "X",
+        20.0,
+        1e8 / wavelength,
+        None,
+        f,
+        gamma,
+        0.0,
+        None,
+        structure=(LineComponent(1e8 / wavelength, 1.0, 20.0),),
+    )
     centre = FineGrid(math.log(wavelength), 1e-6, np.array([1 / wavelength]))
     unit = TransitionLines(line).depth(centre, 1.0, np.array([b]), 1.0, 0.0)[0]
     return line, math.log10(tau0 / unit)
@@ -149,7 +209,7 @@ def model_width(line: Transition, logn: float, b: float, reach: float) -> float:
 def test_curve_of_growth(route, a, tau0, growth):
     b = 3.0
     line, logn = line_with(a, tau0, b)
-    # the damping wings fall as a τ0/u² beyond the reach: 2 a τ0/(√π u) of the half integral is added
+    # the damping wings fall as a τ0/u² beyond the reach: a τ0/(√π u) of the half is added
     reach = max(8.0, 60.0 * math.sqrt(a * tau0)) * b
     if route == "model":
         width = model_width(line, logn, b, reach)

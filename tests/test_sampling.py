@@ -7,7 +7,6 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from scipy.special import wofz
-from support import pixels, single_line_model
 
 from fathomline.atomic import load_atomic_data
 from fathomline.fit import FitSettings, fit_model, minimise
@@ -23,6 +22,7 @@ from fathomline.model.instrument import (
     log_velocity,
 )
 from fathomline.spectra import GaussianLineSpread
+from support import pixels, single_line_model
 
 ATOMS = load_atomic_data()
 
@@ -65,8 +65,13 @@ def test_a_finer_grid_does_not_move_alpha():
     alpha = parameters.free_names.index(ALPHA)
     # both to the last digits: the usual stopping rule alone leaves 1e-4 σ
     places = [
-        minimise(model.residuals_and_jacobian, coarse.free, parameters.lower, parameters.upper,
-                 edm_tolerance=1e-14).x[alpha]
+        minimise(
+            model.residuals_and_jacobian,
+            coarse.free,
+            parameters.lower,
+            parameters.upper,
+            edm_tolerance=1e-14,
+        ).x[alpha]
         for model in (built.model, finer)
     ]
     print(f"a grid four times finer moves Δα/α by {places[1] - places[0]:+.2e} ppm")
@@ -80,12 +85,26 @@ def test_pixel_fluxes_agree_with_the_independent_route(name, logn):
     """Operator route against FFT smoothing and spline integration, from weak to saturated."""
     transition = ATOMS[name]
     wave, low, high = pixels(transition.wavelength, 1.2, (-120.0, 120.0), 2.5)
-    model = single_line_model(transition, wave, low, high, redshift=1.2, velocity=3.3, b=2.7,
-                              logn=logn, fwhm=5.0, dalpha=-7.0)
+    model = single_line_model(
+        transition,
+        wave,
+        low,
+        high,
+        redshift=1.2,
+        velocity=3.3,
+        b=2.7,
+        logn=logn,
+        fwhm=5.0,
+        dalpha=-7.0,
+    )
     ours = model.predict(model.parameters.start)[0].flux
     theirs = synthetic_transmission(
-        np.append(low, high[-1]), [transition], [Cloud(3.3, {transition.ion: logn}, b_turb=2.7)],
-        redshift=1.2, fwhm=5.0, dalpha_ppm=-7.0,
+        np.append(low, high[-1]),
+        [transition],
+        [Cloud(3.3, {transition.ion: logn}, b_turb=2.7)],
+        redshift=1.2,
+        fwhm=5.0,
+        dalpha_ppm=-7.0,
     )
     # the two means over a pixel, in λ and in ln λ, differ by 8e-6 of the flux change in it
     np.testing.assert_allclose(ours, theirs, rtol=0, atol=1e-5)

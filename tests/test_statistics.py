@@ -30,8 +30,12 @@ def ensemble():
     for seed in range(SEEDS):
         noise = np.random.default_rng(seed).standard_normal(len(clean)) / SNR
         spectrum = Spectrum.from_arrays(
-            clean.wavelength, clean.flux + noise, np.full(len(clean), 1.0 / SNR), clean.continuum,
-            lsf=GaussianLineSpread(5.2), name="red",
+            clean.wavelength,
+            clean.flux + noise,
+            np.full(len(clean), 1.0 / SNR),
+            clean.continuum,
+            lsf=GaussianLineSpread(5.2),
+            name="red",
         )
         built = build_model(job, [spectrum], ATOMS)
         fit = fit_model(built.model, FitSettings(restarts=0))
@@ -45,8 +49,10 @@ def ensemble():
 def test_pulls_have_mean_zero_and_width_one(ensemble):
     _, _, values, errors, chi2 = ensemble
     pulls = (values - TRUTH) / errors
-    print(f"{SEEDS} seeds: mean pull {pulls.mean():+.3f}, width {pulls.std(ddof=1):.3f}, "
-          f"σ {errors.mean():.3f} ppm, χ²/ν {chi2.mean():.4f}")
+    print(
+        f"{SEEDS} seeds: mean pull {pulls.mean():+.3f}, width {pulls.std(ddof=1):.3f}, "
+        f"σ {errors.mean():.3f} ppm, χ²/ν {chi2.mean():.4f}"
+    )
     # sampling errors of 800 pulls: 0.035 and 0.025
     assert abs(pulls.mean()) < 0.07
     assert abs(pulls.std(ddof=1) - 1.0) < 0.06
@@ -72,8 +78,10 @@ def cramer_rao(job, edges) -> float:
         columns = dict(c.log_columns)
         if what in columns:
             columns[what] += step
-        new = Cloud(c.velocity + step * (what == "v"), columns, b_turb=c.b_turb + step * (what == "b"))
-        return [*clouds[:k], new, *clouds[k + 1:]]
+        new = Cloud(
+            c.velocity + step * (what == "v"), columns, b_turb=c.b_turb + step * (what == "b")
+        )
+        return [*clouds[:k], new, *clouds[k + 1 :]]
 
     blocks = []
     for i, region in enumerate(job.regions):
@@ -87,14 +95,17 @@ def cramer_rao(job, edges) -> float:
         cut = edges[inside[0] : inside[-1] + 2]
 
         def flux(clouds, dalpha, cut=cut, transition=transition):
-            return synthetic_transmission(cut, [transition], clouds, redshift=z, fwhm=5.2,
-                                          dalpha_ppm=dalpha)
+            return synthetic_transmission(
+                cut, [transition], clouds, redshift=z, fwhm=5.2, dalpha_ppm=dalpha
+            )
 
         columns = [(flux(clouds, TRUTH + 1.0) - flux(clouds, TRUTH - 1.0)) / 2.0]
         for k in range(len(clouds)):
             for what, step in steps.items():
-                columns.append((flux(moved(k, what, step), TRUTH)
-                                - flux(moved(k, what, -step), TRUTH)) / (2 * step))
+                columns.append(
+                    (flux(moved(k, what, step), TRUTH) - flux(moved(k, what, -step), TRUTH))
+                    / (2 * step)
+                )
         continuum = np.zeros((inside.size, 2 * len(job.regions)))
         continuum[:, 2 * i] = flux(clouds, TRUTH)
         continuum[:, 2 * i + 1] = flux(clouds, TRUTH) * np.linspace(-1, 1, inside.size)

@@ -20,8 +20,20 @@ ROOT = Path(__file__).parent.parent
 def wheel(tmp_path_factory):
     folder = tmp_path_factory.mktemp("wheel")
     subprocess.run(
-        [sys.executable, "-m", "pip", "wheel", "--quiet", "--no-deps", "--no-build-isolation",
-         "--no-index", "--disable-pip-version-check", "--wheel-dir", str(folder), str(ROOT)],
+        [
+            sys.executable,
+            "-m",
+            "pip",
+            "wheel",
+            "--quiet",
+            "--no-deps",
+            "--no-build-isolation",
+            "--no-index",
+            "--disable-pip-version-check",
+            "--wheel-dir",
+            str(folder),
+            str(ROOT),
+        ],
         check=True,
     )
     return next(folder.glob("fathomline-*.whl"))
@@ -41,8 +53,17 @@ def test_it_runs_from_a_fresh_environment(wheel, tmp_path):
     venv.create(home, with_pip=True)
     python = home / ("Scripts" if os.name == "nt" else "bin") / "python"
     subprocess.run(
-        [str(python), "-m", "pip", "install", "--quiet", "--no-deps", "--no-index",
-         "--disable-pip-version-check", str(wheel)],
+        [
+            str(python),
+            "-m",
+            "pip",
+            "install",
+            "--quiet",
+            "--no-deps",
+            "--no-index",
+            "--disable-pip-version-check",
+            str(wheel),
+        ],
         check=True,
     )
     site = next((home / "lib").glob("python*")) / "site-packages"
@@ -54,12 +75,24 @@ def test_it_runs_from_a_fresh_environment(wheel, tmp_path):
         "a = load_atomic_data()\n"
         "print(json.dumps([fathomline.__file__, len(a.transitions), len(a.extra_lines)]))\n"
     )
-    done = subprocess.run([str(python), "-c", code], cwd=tmp_path, env=environment,
-                          capture_output=True, text=True, check=True)
+    done = subprocess.run(
+        [str(python), "-c", code],
+        cwd=tmp_path,
+        env=environment,
+        capture_output=True,
+        text=True,
+        check=True,
+    )
     where, transitions, extra = json.loads(done.stdout)
     assert Path(where).is_relative_to(home)
     assert (transitions, extra) == (54, 143)  # README of the reference tables
     command = python.with_name("fathomline")
-    done = subprocess.run([str(command), "demo", "halden-a"], cwd=tmp_path, env=environment,
-                          capture_output=True, text=True, check=True)
+    done = subprocess.run(
+        [str(command), "demo", "halden-a"],
+        cwd=tmp_path,
+        env=environment,
+        capture_output=True,
+        text=True,
+        check=True,
+    )
     assert "report: halden-a/halden-a.result/report.html" in done.stdout

@@ -61,6 +61,7 @@ def main(arguments: list[str] | None = None) -> None:
     ----------
     arguments : list of str, optional
         Default: those of the process.
+
     """
     # numpy is not imported yet. Its threads slow the small matrices of a fit down, several times
     # so when other work shares the cores; whoever wants them sets the variable.

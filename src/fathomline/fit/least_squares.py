@@ -63,6 +63,7 @@ class Minimum:
     message : str
     n_evaluations, n_iterations : int
         An evaluation is one residual with its Jacobian.
+
     """
 
     x: Array
@@ -146,6 +147,7 @@ def minimise(
     -------
     Minimum
         `converged` is False with a message when the iteration did not reach the tolerance.
+
     """
     x = np.clip(start, lower, upper)
     residual, jacobian = function(x)
@@ -155,8 +157,9 @@ def minimise(
     radius, evaluations, iterations, blind_steps = _FIRST_RADIUS, 1, 0, 0
 
     def ended(converged: bool, message: str) -> Minimum:
-        return Minimum(x, residual, jacobian, chi2, edm, held, converged, message,
-                       evaluations, iterations)
+        return Minimum(
+            x, residual, jacobian, chi2, edm, held, converged, message, evaluations, iterations
+        )
 
     while True:
         held = _held(x, jacobian.T @ residual, lower, upper)
@@ -178,7 +181,7 @@ def minimise(
             evaluations += 1
             new_chi2 = float(new_residual @ new_residual)
             ratio = (chi2 - new_chi2) / predicted if predicted > 0.0 else -1.0
-            if 0.0 < predicted and abs(chi2 - new_chi2) < _ROUNDING * chi2:
+            if predicted > 0.0 and abs(chi2 - new_chi2) < _ROUNDING * chi2:
                 # too close to the minimum for χ² to tell: trust the quadratic model
                 blind_steps += 1
                 accepted = True

@@ -16,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.polynomial import legendre
@@ -64,7 +65,8 @@ class ComponentTerms:
         square = DOPPLER_KMS2 * theta[self.temperature] / masses
         if self.b_turb is not None:
             square = square + theta[self.b_turb] ** 2
-        return np.sqrt(square)
+        widths: Array = np.sqrt(square)
+        return widths
 
     @property
     def width_parameters(self) -> tuple[int, ...]:
@@ -111,6 +113,7 @@ class SegmentTerms:
         Limits of the region in km/s, for plots.
     rest : float
         Composite rest wavelength of the region's transition, Å.
+
     """
 
     region: int
@@ -141,6 +144,7 @@ class SegmentPrediction:
         is not fitted.
     components : array (n_components, n)
         Transmission of each component alone, e^{−τ_k} after the instrument.
+
     """
 
     flux: Array
@@ -162,7 +166,7 @@ class _Workspace:
     free: NDArray[np.intp]  # free parameters that the segment depends on
     row: dict[int, int] = field(default_factory=dict)  # full position -> row among `free`
     sigma: float = math.nan
-    matrix: object = None
+    matrix: Any = None  # scipy sparse array
 
 
 class AbsorberModel:
@@ -184,6 +188,7 @@ class AbsorberModel:
     ------
     FitError
         A segment has no pixel to fit.
+
     """
 
     def __init__(
@@ -233,9 +238,7 @@ class AbsorberModel:
                         continue
                     b = component.widths(theta, lines.masses)
                     column = 10.0 ** theta[component.log_columns[ion]]
-                    needed.append(
-                        fine_spacing(float(b.min()), sigma, lines.peak_depth(b, column))
-                    )
+                    needed.append(fine_spacing(float(b.min()), sigma, lines.peak_depth(b, column)))
             spacings.append(min(needed) / self.refine)
         return spacings
 
@@ -258,8 +261,11 @@ class AbsorberModel:
             used.append(segment.zero_level)
         for component in self.components:
             used += [component.velocity, *component.width_parameters]
-            used += [component.log_columns[ion] for ion, _ in segment.lines
-                     if ion in component.log_columns]
+            used += [
+                component.log_columns[ion]
+                for ion, _ in segment.lines
+                if ion in component.log_columns
+            ]
         moving = [p for p in used if self.parameters.ratio[p] != 0.0]
         free = np.unique(self.parameters.index[moving]).astype(np.intp)
         place = {int(k): row for row, k in enumerate(free)}
@@ -331,7 +337,7 @@ class AbsorberModel:
         sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
         if sigma != work.sigma:
             work.matrix, work.sigma = work.operator.matrix(sigma), sigma
-        flux = self._polynomial(segment, work.basis, theta) * (work.matrix @ np.exp(-tau))  # type: ignore[operator]
+        flux = self._polynomial(segment, work.basis, theta) * (work.matrix @ np.exp(-tau))
         if segment.zero_level is not None:
             flux = flux + theta[segment.zero_level]
         result: Array = flux
@@ -390,8 +396,8 @@ class AbsorberModel:
         elif sigma != work.sigma:
             work.matrix, work.sigma = work.operator.matrix(sigma), sigma
         slopes *= -transmission
-        smooth: Array = work.matrix @ transmission  # type: ignore[operator]
-        derivative: Array = work.matrix @ slopes.T  # type: ignore[operator]
+        smooth: Array = work.matrix @ transmission
+        derivative: Array = work.matrix @ slopes.T
         ratio = self.parameters.ratio
         if fwhm_row is not None:
             derivative[:, fwhm_row] += (

@@ -57,6 +57,7 @@ class FineGrid:
         First ln λ and spacing.
     inverse : array (n,)
         1/λ, Å⁻¹.
+
     """
 
     start: float
@@ -82,6 +83,7 @@ class TransitionLines:
     ----------
     transition : Transition
         With its isotopic and hyperfine components, or as a composite.
+
     """
 
     __slots__ = ("_gamma", "_omega", "_q", "_share", "_strength", "masses", "name")
@@ -125,6 +127,7 @@ class TransitionLines:
             Column density N, cm⁻².
         x : float
             (α/α0)² − 1.
+
         """
         tau = np.zeros(grid.inverse.size)
         for part, values in self.parts(grid, s, b, column, x):
@@ -149,6 +152,7 @@ class TransitionLines:
         array (1, n), or (3 + n_width_parameters, n) with `slopes`
             τ; s ∂τ/∂s (also the derivative to a shift of the wavelength scale); ∂τ/∂x; and ∂τ/∂p
             for each parameter p of the width.
+
         """
         rest = 1e8 / (self._omega + self._q * x)
         strength = DEPTH_CONSTANT * column * self._strength
@@ -157,8 +161,9 @@ class TransitionLines:
             half = CORE * b.max() / C_KMS
             first, last = grid.span(rest.min() * s / (1.0 + half), rest.max() * s / (1.0 - half))
         if first < last:
-            values = self._values(grid.inverse[first:last], s, b, x, rest, strength, slopes,
-                                  core=True)
+            values = self._values(
+                grid.inverse[first:last], s, b, x, rest, strength, slopes, core=True
+            )
             yield slice(first, last), values
         wings = [w for w in (slice(0, first), slice(last, grid.inverse.size)) if w.stop > w.start]
         if wings and self._merges_in_wings(rest, b, strength):
@@ -167,15 +172,17 @@ class TransitionLines:
             b = np.array([share @ b])
             slopes = None if slopes is None else (slopes @ share)[:, None]
         for wing in wings:
-            yield wing, self._values(grid.inverse[wing], s, b, x, rest, strength, slopes,
-                                     core=False)
+            yield (
+                wing,
+                self._values(grid.inverse[wing], s, b, x, rest, strength, slopes, core=False),
+            )
 
     def _merges_in_wings(self, rest: Array, b: Array, strength: Array) -> bool:
         mean = self._share @ rest
         spread = C_KMS / b.min() * (rest / mean - 1.0)
         factor = 3.0 * float(self._share @ spread**2) / CORE**4 / math.sqrt(math.pi)
         damped = strength.sum() * (mean / b.min()) ** 2 * self._gamma * _DAMPING
-        return factor * damped < _WING_TOLERANCE
+        return bool(factor * damped < _WING_TOLERANCE)
 
     def _values(
         self,
@@ -196,7 +203,8 @@ class TransitionLines:
         amplitude = strength * rest / b
         functions = (voigt_core if core else voigt_wing)(a, u, derivatives=slopes is not None)
         if slopes is None:
-            return amplitude[None, :] @ functions[0]
+            tau: Array = amplitude[None, :] @ functions[0]
+            return tau
         coefficients = np.zeros((3 + slopes.shape[0], 4, b.size))
         coefficients[0, 0] = amplitude
         coefficients[1, 1] = amplitude * k
@@ -207,4 +215,7 @@ class TransitionLines:
         coefficients[3:, 0] = relative
         coefficients[3:, 2] = relative
         coefficients[3:, 3] = relative * a
-        return coefficients.reshape(3 + slopes.shape[0], -1) @ functions.reshape(-1, u.shape[1])
+        values: Array = coefficients.reshape(3 + slopes.shape[0], -1) @ functions.reshape(
+            -1, u.shape[1]
+        )
+        return values

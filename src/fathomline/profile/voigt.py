@@ -64,11 +64,12 @@ def faddeeva(a: Array, u: Array) -> ComplexArray:
     a : array, broadcastable to `u`
         0 ≤ a ≤ `SERIES_A`.
     u : array
-        \\|u\\| ≤ 12.
+        From −12 to 12.
 
     Returns
     -------
     complex array of the shape of `u`
+
     """
     coefficients = _series()
     scaled = u * _NODES_PER_UNIT
@@ -124,6 +125,7 @@ def voigt_core(a: Array, u: Array, *, derivatives: bool) -> Array:
     -------
     array (4, n_lines, n), or (1, n_lines, n) without derivatives
         H, ∂H/∂u, u ∂H/∂u and ∂H/∂a.
+
     """
     damping = a[:, None]
     w = _general(damping, u)
