@@ -32,7 +32,7 @@ from fathomline.model import (
 from fathomline.profile import TransitionLines
 from fathomline.spectra import GaussianLineSpread, Spectrum, local_level, read_spectrum
 
-__all__ = ["ALPHA", "BuiltModel", "build_model", "load_atoms", "load_spectra"]
+__all__ = ["ALPHA", "BuiltModel", "build_model", "load_atoms", "load_spectra", "load_spectrum"]
 
 ALPHA = "alpha.dalpha"
 """Name of Δα/α (ppm) among the parameters."""
@@ -77,6 +77,29 @@ def _line_spread(table: SpectrumTable, job: Job, index: int) -> GaussianLineSpre
     )
 
 
+def load_spectrum(job: Job, index: int) -> Spectrum:
+    """Read spectrum `index` (from 0) of a job.
+
+    Raises
+    ------
+    SpectrumError
+        The file cannot be read.
+    """
+    table = job.spectra[index]
+    return read_spectrum(
+        job.spectrum_path(index),
+        columns=_columns(table),
+        unit=table.unit,
+        medium=table.medium,
+        frame=table.frame,
+        velocity=table.berv,
+        lsf=_line_spread(table, job, index),
+        name=table.id,
+        error_file=job.error_path(index),
+        continuum_file=job.continuum_path(index),
+    )
+
+
 def load_spectra(job: Job) -> tuple[Spectrum, ...]:
     """Read the spectra of a job.
 
@@ -87,22 +110,9 @@ def load_spectra(job: Job) -> tuple[Spectrum, ...]:
     """
     spectra: list[Spectrum] = []
     faults: list[str] = []
-    for index, table in enumerate(job.spectra):
+    for index in range(len(job.spectra)):
         try:
-            spectra.append(
-                read_spectrum(
-                    job.spectrum_path(index),
-                    columns=_columns(table),
-                    unit=table.unit,
-                    medium=table.medium,
-                    frame=table.frame,
-                    velocity=table.berv,
-                    lsf=_line_spread(table, job, index),
-                    name=table.id,
-                    error_file=job.error_path(index),
-                    continuum_file=job.continuum_path(index),
-                )
-            )
+            spectra.append(load_spectrum(job, index))
         except SpectrumError as fault:
             faults.append(f"{job.locate('spectrum', index, 'file')}: {fault}")
     if faults:

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 import fathomline
-from fathomline.fit import FLAGS, FitResult, FitSettings, fit_model
+from fathomline.fit import CAUTIONS, FLAGS, FitResult, FitSettings, fit_model
 from fathomline.job.building import ALPHA, BuiltModel, build_model, load_atoms, load_spectra
 from fathomline.job.digest import job_digest
 from fathomline.job.schema import Job
@@ -108,6 +108,27 @@ class Measurement:
     def flags(self) -> tuple[str, ...]:
         """All flags of the row in the measurement table."""
         return (*self.fit.flags, STAT_ONLY)
+
+    def flag_meanings(self) -> dict[str, str]:
+        """The flags of this measurement and what they mean."""
+        meanings = {**FLAGS, **CAUTIONS, STAT_ONLY: "no systematic error budget was made"}
+        return {flag: meanings[flag] for flag in self.flags}
+
+    def error(self, name: str) -> float | str:
+        """1σ error of a parameter, or the reason why it has none.
+
+        The reason is ``fixed``, ``at bound`` or ``singular``. The error of a tied parameter is that
+        of its target times the ratio.
+        """
+        parameters = self.built.model.parameters
+        i = parameters.position(name)
+        if parameters.ratio[i] == 0.0:
+            return "fixed"
+        root = parameters.free_names[parameters.index[i]]
+        sigma = self.fit.covariance.sigma(root)
+        if sigma is None:
+            return self.fit.covariance.reasons[root]
+        return abs(float(parameters.ratio[i])) * sigma
 
     @property
     def trustworthy(self) -> bool:
