@@ -28,6 +28,7 @@ from fathomline.report.panels import (
 )
 from fathomline.report.style import (
     COLOURS,
+    MM_PER_INCH,
     ONE_COLUMN,
     SMALL_TEXT,
     TEXT,
@@ -39,6 +40,7 @@ from fathomline.report.style import (
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
+    from matplotlib.text import Text
 
     from fathomline.job.measurement import Measurement
 
@@ -48,13 +50,16 @@ Array = NDArray[np.float64]
 
 VELOCITY_LABEL = "Velocity from the absorber redshift (km s$^{-1}$)"
 FLUX_LABEL = "Normalised flux"
+SHORT_FLUX_LABEL = "Norm. flux"
 RESIDUAL_LABEL = "Res. (σ)"
 
 _TWO_COLUMNS_FROM = 5  # panels
 _LEFT, _BETWEEN, _RIGHT = 12.0, 9.5, 2.5  # mm
 _HEADER, _STRIP, _GAP, _BOTTOM = 3.6, 8.5, 2.4, 8.5
-_PANEL, _LEAST_PANEL, _PAGE = 23.0, 15.0, 235.0
+_PANEL, _LEAST_PANEL, _PAGE = 23.0, 16.0, 235.0
+_ROOM_FOR_LABEL = 21.0
 _LEGEND_ROW = 3.6
+_SEPARATOR = "  ·  "
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,8 +79,12 @@ class _Sheet:
         )
         return self.figure.add_axes(box)
 
-    def text(self, x: float, y: float, text: str, **style: Any) -> None:
-        self.figure.text(x / self.width, 1.0 - y / self.height, text, **style)
+    def text(self, x: float, y: float, text: str, **style: Any) -> Text:
+        return self.figure.text(x / self.width, 1.0 - y / self.height, text, **style)
+
+    def extent(self, text: Text) -> float:
+        """Width of a text, mm."""
+        return float(text.get_window_extent().width) / self.figure.dpi * MM_PER_INCH
 
 
 def _new_sheet(width: float, height: float) -> _Sheet:
@@ -93,6 +102,7 @@ def velocity_stack(measurement: Measurement, *, columns: int | None = None) -> F
     Parameters
     ----------
     measurement : Measurement
+        What is drawn.
     columns : {1, 2}, optional
         Columns of panels: 84 or 174 mm wide. Default: two for more than four panels.
 
@@ -101,6 +111,7 @@ def velocity_stack(measurement: Measurement, *, columns: int | None = None) -> F
     Figure
         A region in several spectra has a panel for each. Panels run down the first column, then
         the second, in the order of the job.
+
     """
     if columns not in (None, 1, 2):
         raise ValueError(f"columns must be 1 or 2, found {columns!r}")
@@ -196,8 +207,12 @@ def _draw_block(
         axes.tick_params(which="both", top=True, right=True)
         axes.tick_params(axis="x", labelbottom=last and axes is strip)
     strip.tick_params(axis="y", which="minor", left=False, right=False)
+    long, short = FLUX_LABEL, SHORT_FLUX_LABEL
     if first:
-        for axes, label in ((flux, FLUX_LABEL), (strip, RESIDUAL_LABEL)):
+        for axes, label in (
+            (flux, long if height >= _ROOM_FOR_LABEL else short),
+            (strip, RESIDUAL_LABEL),
+        ):
             axes.set_ylabel(label, fontsize=TEXT if axes is flux else SMALL_TEXT)
             axes.yaxis.set_label_coords(-9.3 / width, 0.5)
     if last:
@@ -217,13 +232,21 @@ def _ticks(low: float, high: float, margin: float) -> list[float]:
 def _header(
     sheet: _Sheet, panel: Panel, x: float, y: float, width: float, magnified: float | None
 ) -> None:
+    """Title on the left, facts on the right; the least needed facts go when they do not fit."""
     base = y + _HEADER - 0.6
-    sheet.text(x, base, panel.title, fontsize=TEXT, fontweight="bold", va="baseline", ha="left")
+    title = sheet.text(
+        x, base, panel.title, fontsize=TEXT, fontweight="bold", va="baseline", ha="left"
+    )
     facts = [f"λ {panel.segment.rest:.3f} Å"]
     if magnified is not None:
-        facts.append(f"axis from {magnified:g}")
+        facts.insert(0, f"axis from {magnified:g}")
     facts.append(f"χ²/n {panel.chi2 / panel.n_fitted:.2f}")
-    sheet.text(x + width, base, "  ·  ".join(facts), fontsize=SMALL_TEXT, va="baseline", ha="right")
+    said = sheet.text(
+        x + width, base, _SEPARATOR.join(facts), fontsize=SMALL_TEXT, va="baseline", ha="right"
+    )
+    while len(facts) > 1 and sheet.extent(title) + sheet.extent(said) + 2.0 > width:
+        facts.pop()
+        said.set_text(_SEPARATOR.join(facts))
 
 
 def _legend(sheet: _Sheet, panels: Sequence[Panel], columns: int) -> None:
@@ -252,7 +275,7 @@ def _legend(sheet: _Sheet, panels: Sequence[Panel], columns: int) -> None:
         labels,
         loc="upper left",
         bbox_to_anchor=(_LEFT / sheet.width, 1.0 - 0.4 / sheet.height),
-        ncols=len(labels) if columns == 2 else 3,
+        ncols=len(labels) if columns == 2 else (len(labels) + 1) // 2,
         borderaxespad=0.0,
         borderpad=0.0,
         handlelength=2.2,
@@ -273,8 +296,10 @@ def residual_summary(measurement: Measurement, *, columns: int = 2) -> Figure:
     Parameters
     ----------
     measurement : Measurement
+        What is drawn.
     columns : {1, 2}
         84 mm wide with the panels one over the other, or 174 mm with the panels side by side.
+
     """
     if columns not in (1, 2):
         raise ValueError(f"columns must be 1 or 2, found {columns!r}")
@@ -313,7 +338,7 @@ def _residual_summary(panels: Sequence[Panel], columns: int) -> Figure:
     sheet.text(
         left + width,
         _HEADER - 0.6,
-        "bands: ±1 and ±2 of the expected 1/√n",
+        "bands: ±1/√n and ±2/√n",
         fontsize=SMALL_TEXT,
         va="baseline",
         ha="right",
@@ -352,7 +377,7 @@ def composite_residual(panels: Sequence[Panel]) -> tuple[Array, Array, Array]:
         np.add.at(total, place, panel.prediction.residual[good])
         np.add.at(count, place, 1.0)
     with np.errstate(invalid="ignore"):
-        mean = total / count
+        mean: Array = total / count
     return edges, mean, count
 
 
@@ -378,6 +403,11 @@ def _draw_composite(axes: Axes, panels: Sequence[Panel], limits: tuple[float, fl
     axes.set_ylim(-reach, reach)
 
 
+def _without_negative_zero(value: float) -> str:
+    text = f"{value:+.2f}"
+    return "0.00" if float(text) == 0.0 else text.replace("-", "\N{MINUS SIGN}")
+
+
 def _draw_histogram(axes: Axes, panels: Sequence[Panel]) -> None:
     residual = np.concatenate([p.prediction.residual[p.segment.good] for p in panels])
     bin_width = 0.5 if residual.size < 2000 else 0.25
@@ -394,7 +424,7 @@ def _draw_histogram(axes: Axes, panels: Sequence[Panel]) -> None:
     axes.set_ylim(0.0, top)
     notes = [
         f"n = {residual.size}",
-        f"mean {residual.mean():+.2f}".replace("-", "\N{MINUS SIGN}"),
+        f"mean {_without_negative_zero(float(residual.mean()))}",
         f"scatter {residual.std():.2f}",
     ]
     axes.text(
@@ -452,6 +482,7 @@ def save_figures(measurement: Measurement, folder: Path) -> list[Path]:
     Parameters
     ----------
     measurement : Measurement
+        What is drawn.
     folder : Path
         Made if it does not exist.
 
@@ -459,6 +490,7 @@ def save_figures(measurement: Measurement, folder: Path) -> list[Path]:
     -------
     list of Path
         The files, in the order written.
+
     """
     folder.mkdir(parents=True, exist_ok=True)
     written = []

@@ -45,6 +45,7 @@ class Mark:
         Centre of the number, mm; None for a tick without a number.
     row : int
         Row of the number, from 0.
+
     """
 
     number: int
@@ -62,12 +63,15 @@ def spread(x: Array, distance: Array, low: float, high: float) -> Array:
         Wanted places, ascending.
     distance : array (n − 1,)
         Least distance between neighbours; their sum must fit between `low` and `high`.
+    low, high : float
+        Limits of the places.
 
     Returns
     -------
     array (n,)
         With y_i = z_i + Σ distance, z must ascend: isotonic regression by pooling adjacent
         violators (for instance Best & Chakravarti 1990, Math. Programming 47, 425).
+
     """
     offset = np.concatenate([[0.0], np.cumsum(distance)])
     blocks: list[list[float]] = []  # mean, size

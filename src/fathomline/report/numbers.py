@@ -23,6 +23,7 @@ def value_with_error(value: float, error: float | None) -> str:
     Parameters
     ----------
     value : float
+        Best value.
     error : float or None
         1σ error in the unit of the value. None (or 0, an exact number) gives the value alone with
         four significant digits.
@@ -36,6 +37,7 @@ def value_with_error(value: float, error: float | None) -> str:
     ------
     ValueError
         The value is not finite, or the error is negative or not finite.
+
     """
     if not math.isfinite(value):
         raise ValueError(f"value must be finite, found {value!r}")

@@ -60,6 +60,7 @@ class Panel:
         Numbers, from 1, of the components that have the ion of the region.
     places : tuple of float
         Their velocities, km/s.
+
     """
 
     segment: SegmentTerms
@@ -143,9 +144,9 @@ def flux_limits(panel: Panel) -> tuple[float, float, bool]:
     depth = top - float(model.min())
     if float(model.min()) < 1.0 - _WEAK_DEPTH or noise > 0.15:
         return -0.09, top + max(0.13, min(4.0 * noise, 0.8)), False
-    span = max(1.25 * depth + 2.0 * noise, 8.0 * noise, 0.02)
-    unit = 10.0 ** math.floor(math.log10(span)) / 2.0
-    low = math.floor((top - span) / unit + 1e-9) * unit
+    span = max(1.12 * depth + 2.5 * noise, 8.0 * noise, 0.02)
+    unit = 10.0 ** math.floor(math.log10(span)) / 5.0
+    low = round(math.floor((top - span) / unit + 1e-9) * unit, 6)
     if low <= 0.2:
         return -0.09, top + max(0.13, 4.0 * noise), False
     return low, top + max(4.0 * noise, 0.1 * span), True
@@ -238,10 +239,10 @@ def draw_residuals(axes: Axes, panel: Panel) -> None:
         if beyond.any():
             axes.plot(
                 panel.velocity[beyond],
-                np.full(int(beyond.sum()), sign * (RESIDUAL_LIMIT - 0.7)),
+                np.full(int(beyond.sum()), sign * (RESIDUAL_LIMIT - 0.65)),
                 linestyle="none",
                 marker=marker,
-                markersize=2.2,
+                markersize=2.8,
                 markeredgewidth=0.0,
                 color=COLOURS["model"],
                 zorder=3,

@@ -7,7 +7,7 @@ blindness; line style or shape repeats what a colour says.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from types import MappingProxyType
 from typing import Any
@@ -56,7 +56,7 @@ COLOURS = MappingProxyType(
 )
 """Colour of each role."""
 
-SETTINGS: MappingProxyType[str, Any] = MappingProxyType(
+SETTINGS: Mapping[Any, Any] = MappingProxyType(
     {
         "font.family": ["DejaVu Sans"],
         "mathtext.fontset": "dejavusans",
@@ -112,5 +112,5 @@ def figure_style() -> Iterator[None]:
 
     with matplotlib.rc_context():
         matplotlib.rcdefaults()
-        matplotlib.rcParams.update(SETTINGS)
+        matplotlib.rcParams.update(dict(SETTINGS))
         yield
