@@ -34,6 +34,10 @@ __all__ = [
     "transitions_text",
 ]
 
+_NO_SOURCE = "the transition table itself, which names no source of its own for this quantity"
+
+_FROM = {"file": "stated in the file", "argument": "stated in the job", "guess": "assumed"}
+
 _WHY = {
     "fixed": "fixed",
     "at bound": "no error: at bound",
@@ -48,7 +52,6 @@ class Cell:
     text: str
     remark: str = ""
     share: float | None = None
-    prose: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -251,17 +254,23 @@ def _tiny(value: float) -> str:
     return _signed(value, 4) if abs(value) < 1e4 else plain_number(value)
 
 
-def atomic_table(m: Measurement) -> TableText:
-    """The laboratory numbers behind every line that the model holds."""
+def atomic_table(m: Measurement) -> tuple[TableText, list[str]]:
+    """The laboratory numbers behind every line that the model holds, and their sources.
+
+    The numbers are those of the transition table, not rounded; the sources are numbered from 1.
+    """
     names = dict.fromkeys(
         lines.name for segment in m.built.model.segments for _, lines in segment.lines
     )
     own = {transition.name: transition for transition in m.built.transitions}
-    rows = [_atomic_row(own.get(name) or m.built.atoms[name], name in own) for name in names]
-    return TableText(
-        "Atomic data used: vacuum wavenumber ω₀ of the whole transition, oscillator strength f, "
+    sources: dict[str, int] = {}
+    rows = [
+        _atomic_row(own.get(name) or m.built.atoms[name], name in own, sources) for name in names
+    ]
+    table = TableText(
+        "Atomic data as used: vacuum wavenumber ω₀ of the whole transition, oscillator strength f, "
         "damping constant Γ, sensitivity q in ω = ω₀ + q[(α/α₀)² − 1], and the number of isotopic "
-        "and hyperfine lines.",
+        "and hyperfine lines. Sources are listed below.",
         (
             ("Transition", ""),
             ("ω₀", "cm⁻¹"),
@@ -273,31 +282,36 @@ def atomic_table(m: Measurement) -> TableText:
         ),
         tuple(rows),
     )
+    return table, list(sources)
 
 
-def _atomic_row(t: Transition, own: bool) -> tuple[Cell, ...]:
-    labels = {"wavenumber": "ω₀", "q": "q", "f": "f", "gamma": "Γ"}
-    present = {"wavenumber": True, "f": True, "gamma": t.gamma is not None, "q": t.q is not None}
-    said = [f"{labels[key]}: {t.sources[key]}" for key in labels if t.sources.get(key)]
-    said += [
-        f"{labels.get(key, key)}: {text}" for key, text in t.sources.items() if key not in labels
-    ]
-    silent = [labels[key] for key, there in present.items() if there and not t.sources.get(key)]
-    if silent:
-        said.append(f"{', '.join(silent)}: as compiled in the transition table")
+def _atomic_row(t: Transition, own: bool, sources: dict[str, int]) -> tuple[Cell, ...]:
+    present = {
+        "wavenumber": ("ω₀", True),
+        "f": ("f", True),
+        "gamma": ("Γ", t.gamma is not None),
+        "q": ("q", t.q is not None),
+    }
+    cited: dict[int, list[str]] = {}
+    for key, (symbol, there) in present.items():
+        if there:
+            source = t.sources.get(key, _NO_SOURCE)
+            number = sources.setdefault(source, len(sources) + 1)
+            cited.setdefault(number, []).append(symbol)
     return (
         Cell(t.name, "" if own else "also in a window"),
-        Cell(
-            value_with_error(t.wavenumber, t.wavenumber_err)
-            if t.wavenumber_err
-            else f"{t.wavenumber:.3f}"
-        ),
-        Cell(f"{t.f:.4g}"),
-        Cell(plain_number(t.gamma, 3)),
-        Cell("—" if t.q is None else value_with_error(t.q, t.q_err)),
+        Cell(_as_tabulated(t.wavenumber, t.wavenumber_err)),
+        Cell(_as_tabulated(t.f)),
+        Cell(plain_number(t.gamma)),
+        Cell("—" if t.q is None else _as_tabulated(t.q, t.q_err)),
         Cell(str(len(t.components))),
-        Cell(". ".join(said) + ".", prose=True),
+        Cell("; ".join(f"{', '.join(symbols)} [{n}]" for n, symbols in cited.items())),
     )
+
+
+def _as_tabulated(value: float, error: float | None = None) -> str:
+    text = f"{value:.12g}" if error is None else f"{value:.12g} ± {error:.12g}"
+    return text.replace("-", "\N{MINUS SIGN}")
 
 
 def input_files(m: Measurement) -> list[InputFile]:
@@ -321,9 +335,9 @@ def _input_file(spectrum: Spectrum, file: str, m: Measurement) -> InputFile:
         ("Range", f"{wave[0]:.2f} to {wave[-1]:.2f} Å, {reading.pixels} pixels"),
         ("Masked pixels", masked),
         ("Columns", ", ".join(f"{role}: {name}" for role, name in reading.columns.items()) or "—"),
-        ("Wavelength unit from", reading.unit_source),
-        ("Medium", f"{reading.medium} (from {reading.medium_source})"),
-        ("Frame", f"{reading.frame} (from {reading.frame_source})"),
+        ("Wavelength unit", _FROM.get(reading.unit_source, reading.unit_source)),
+        ("Medium", _stated(reading.medium, reading.medium_source)),
+        ("Frame", _stated(reading.frame, reading.frame_source)),
         ("Line-spread function", f"Gaussian, FWHM {_with_remark(_cell(m, _fwhm(m, index)))} km/s"),
     ]
     if reading.barycentric_velocity is not None:
@@ -333,6 +347,10 @@ def _input_file(spectrum: Spectrum, file: str, m: Measurement) -> InputFile:
         for role, entry in reading.companions.items()
     ]
     return InputFile(spectrum.name, file, tuple(facts), reading.guesses, reading.steps)
+
+
+def _stated(value: str, source: str) -> str:
+    return f"{value}, {_FROM.get(source, source)}"
 
 
 def _fwhm(m: Measurement, index: int) -> str:

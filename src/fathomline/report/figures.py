@@ -203,6 +203,7 @@ def _draw_block(
     strip.set_yticks([-3.0, 0.0, 3.0])
     for axes in (flux, strip):
         axes.set_xlim(*limits)
+        axes.set_xticks(_ticks(*limits, 0.02, 6))
         axes.minorticks_on()
         axes.tick_params(which="both", top=True, right=True)
         axes.tick_params(axis="x", labelbottom=last and axes is strip)
@@ -220,12 +221,12 @@ def _draw_block(
     return low if magnified else None
 
 
-def _ticks(low: float, high: float, margin: float) -> list[float]:
+def _ticks(low: float, high: float, margin: float, most: int = 4) -> list[float]:
     """Round tick values that stay clear of the ends of the axis."""
     from matplotlib.ticker import MaxNLocator
 
     span = high - low
-    ticks = MaxNLocator(nbins=4, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high)
+    ticks = MaxNLocator(nbins=most, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high)
     return [float(t) for t in ticks if low + margin * span <= t <= high - margin * span]
 
 
@@ -278,10 +279,10 @@ def _legend(sheet: _Sheet, panels: Sequence[Panel], columns: int) -> None:
         ncols=len(labels) if columns == 2 else (len(labels) + 1) // 2,
         borderaxespad=0.0,
         borderpad=0.0,
-        handlelength=2.2,
+        handlelength=2.2 if columns == 2 else 1.8,
         handleheight=0.8,
         handletextpad=0.6,
-        columnspacing=1.8,
+        columnspacing=1.8 if columns == 2 else 1.2,
         labelspacing=0.35,
     )
 
@@ -326,6 +327,7 @@ def _residual_summary(panels: Sequence[Panel], columns: int) -> Figure:
     composite = sheet.axes(left, _HEADER + band, width, height)
     _draw_composite(composite, panels, limits)
     composite.set_xlim(*limits)
+    composite.set_xticks(_ticks(*limits, 0.02, 8 if columns == 2 else 6))
     composite.set_xlabel(VELOCITY_LABEL)
     composite.set_ylabel("Mean residual (σ)")
     sheet.text(
@@ -351,6 +353,7 @@ def _residual_summary(panels: Sequence[Panel], columns: int) -> Figure:
         part = (width, height)
     histogram = sheet.axes(x, y, *part)
     _draw_histogram(histogram, panels)
+    histogram.set_xticks([-4.0, -2.0, 0.0, 2.0, 4.0])
     histogram.set_xlabel("Residual (σ)")
     histogram.set_ylabel("Number of pixels")
     sheet.text(x, y - 0.6, "All fitted pixels", fontweight="bold", va="baseline")
@@ -369,7 +372,7 @@ def composite_residual(panels: Sequence[Panel]) -> tuple[Array, Array, Array]:
     """Bin edges (m + 1,) in km/s, mean residual (m,) and number of pixels (m,) in each bin."""
     low, high = _velocity_limits(panels)
     width = max(float(np.median(panel.high - panel.low)) for panel in panels)
-    edges = low + width * np.arange(math.ceil((high - low) / width) + 1)
+    edges: Array = low + width * np.arange(math.ceil((high - low) / width) + 1, dtype=np.float64)
     total, count = np.zeros(edges.size - 1), np.zeros(edges.size - 1)
     for panel in panels:
         good = panel.segment.good

@@ -56,6 +56,7 @@ def render_report(measurement: Measurement, *, command: str = "") -> str:
     )
     job = measurement.job
     provenance = measurement.provenance()
+    atomic, sources = content.atomic_table(measurement)
     return environment.get_template("report.html.j2").render(
         absorber=job.absorber,
         version=fathomline.__version__,
@@ -72,7 +73,8 @@ def render_report(measurement: Measurement, *, command: str = "") -> str:
         components=content.components_text(measurement),
         restarts=content.restarts_table(measurement),
         all_returned=all(r.returned for r in measurement.fit.restarts),
-        atomic=content.atomic_table(measurement),
+        atomic=atomic,
+        sources=sources,
         tables=provenance["atomic_data"]["tables"],
         inputs=content.input_files(measurement),
         settings=content.settings(measurement),
