@@ -180,19 +180,19 @@ BAD_JOBS = {
     "unknown key": (
         "window = [-120.0, 110.0]       # km/s",
         "windows = [-120.0, 110.0]  #",
-        r":19: .*unknown key 'windows'.*'window'",
+        r":18: .*unknown key 'windows'.*'window'",
     ),
     "wrong type": ("redshift = 1.15085 ", 'redshift = "high" ', r":7: .*expected a number"),
     "unknown transition": (
         "Fe II 2374",
         "Fe II 2375",
-        r":22: .*no transition 'Fe II 2375'.*Fe II 2374",
+        r":21: .*no transition 'Fe II 2375'.*Fe II 2374",
     ),
-    "transition without q": ("Fe II 2374", "Fe II 2389", r":22: .*no sensitivity coefficient"),
+    "transition without q": ("Fe II 2374", "Fe II 2389", r":21: .*no sensitivity coefficient"),
     "transition not covered": (
         'transition = "Fe II 2374"',
         'transition = "Fe II 1608"',
-        r":22: .*Fe II 1608 at 3459.\d+ Å is not covered.*'red' covers",
+        r":21: .*Fe II 1608 at 3459.\d+ Å is not covered.*'red' covers",
     ),
     "component outside": (
         "velocity = 4.0",
@@ -220,7 +220,7 @@ BAD_JOBS = {
     "all excluded": (
         'transition = "Fe II 2374"',
         'transition = "Fe II 2374"\nexclude = [[-120.0, 110.0]]',
-        r":22: .*has no good pixel",
+        r":21: .*has no good pixel",
     ),
     "two regions share pixels": (
         'transition = "Fe II 2374"',
