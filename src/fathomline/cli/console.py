@@ -41,7 +41,11 @@ def print_pairs(pairs: Sequence[tuple[str, str]]) -> None:
 def progress(label: str) -> Iterator[Progress]:
     """A status line on a terminal's stderr while the block runs; silent in a pipe."""
     if not sys.stderr.isatty():
-        yield lambda text, chi2=None: None
+
+        def silent(text: str, chi2: float | None = None) -> None:
+            pass
+
+        yield silent
         return
     from rich.console import Console
 

@@ -36,12 +36,18 @@ def _columns(pairs: tuple[str, ...]) -> dict[str, str] | None:
 
 @click.command(epilog=_EPILOG)
 @click.argument("spectrum", type=click.Path(path_type=Path))
-@click.option("--column", "columns", multiple=True, metavar="ROLE=NAME",
-              help="Column of wavelength, flux, error or continuum; may be repeated.")
+@click.option(
+    "--column",
+    "columns",
+    multiple=True,
+    metavar="ROLE=NAME",
+    help="Column of wavelength, flux, error or continuum; may be repeated.",
+)
 @click.option("--unit", help="Unit of the wavelengths, where the file does not say.")
 @click.option("--medium", type=click.Choice(["vacuum", "air"]), help="Medium of the wavelengths.")
-@click.option("--frame", type=click.Choice(["barycentric", "topocentric"]),
-              help="Frame of the wavelengths.")
+@click.option(
+    "--frame", type=click.Choice(["barycentric", "topocentric"]), help="Frame of the wavelengths."
+)
 @click.option("--berv", type=float, help="Barycentric velocity of a topocentric spectrum, km/s.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON.")
 def inspect(
@@ -56,8 +62,9 @@ def inspect(
     """Show what the reader understood of SPECTRUM: ranges, sampling, S/N, frame, masks, guesses."""
     from fathomline.spectra import read_spectrum, summarise
 
-    data = read_spectrum(spectrum, columns=_columns(columns), unit=unit, medium=medium,
-                         frame=frame, velocity=berv)
+    data = read_spectrum(
+        spectrum, columns=_columns(columns), unit=unit, medium=medium, frame=frame, velocity=berv
+    )
     summary = summarise(data)
     if as_json:
         print(json.dumps(summary.to_dict(), ensure_ascii=False))
@@ -78,24 +85,40 @@ def _print(summary: SpectrumSummary) -> None:
         ("format", str(reading.get("format"))),
         ("columns", ", ".join(f"{k} = {v}" for k, v in dict(reading.get("columns") or {}).items())),
         ("wavelengths", f"{summary.start:.3f} to {summary.end:.3f} Å, vacuum, barycentric"),
-        ("in the file", f"{reading.get('medium')} ({reading.get('medium_source')}), "
-                        f"{reading.get('frame')} ({reading.get('frame_source')})"),
+        (
+            "in the file",
+            f"{reading.get('medium')} ({reading.get('medium_source')}), "
+            f"{reading.get('frame')} ({reading.get('frame_source')})",
+        ),
         ("pixels", f"{summary.pixels}, {100 * summary.masked_fraction:.2f} % masked"),
-        ("pixel size", f"{summary.pixel_median:.3f} km/s "
-                       f"({summary.pixel_min:.3f} to {summary.pixel_max:.3f}), "
-                       f"{'log-linear' if summary.log_linear else 'not log-linear'}"),
-        ("continuum", "in the file" if summary.has_continuum
-         else "none: each region starts from a robust local level"),
+        (
+            "pixel size",
+            f"{summary.pixel_median:.3f} km/s "
+            f"({summary.pixel_min:.3f} to {summary.pixel_max:.3f}), "
+            f"{'log-linear' if summary.log_linear else 'not log-linear'}",
+        ),
+        (
+            "continuum",
+            "in the file"
+            if summary.has_continuum
+            else "none: each region starts from a robust local level",
+        ),
         ("correlation of neighbouring pixels", correlation),
     ]
-    pairs += [("masked", f"{reason}: {100 * part:.2f} %")
-              for reason, part in summary.masked_by_reason.items()]
-    pairs += [("gap", f"{gap.start:.2f} to {gap.end:.2f} Å ({gap.pixels} masked pixels)")
-              for gap in summary.gaps]
     pairs += [
-        ("signal-to-noise per pixel",
-         f"{level.start:.0f} to {level.end:.0f} Å: "
-         + ("none" if level.signal_to_noise is None else f"{level.signal_to_noise:.0f}"))
+        ("masked", f"{reason}: {100 * part:.2f} %")
+        for reason, part in summary.masked_by_reason.items()
+    ]
+    pairs += [
+        ("gap", f"{gap.start:.2f} to {gap.end:.2f} Å ({gap.pixels} masked pixels)")
+        for gap in summary.gaps
+    ]
+    pairs += [
+        (
+            "signal-to-noise per pixel",
+            f"{level.start:.0f} to {level.end:.0f} Å: "
+            + ("none" if level.signal_to_noise is None else f"{level.signal_to_noise:.0f}"),
+        )
         for level in summary.noise
     ]
     for kind, key in (("guess", "guesses"), ("warning", "warnings"), ("step", "steps")):

@@ -25,12 +25,25 @@ Examples:
 
 @click.command(epilog=_EPILOG)
 @click.option("--ion", help='Only this ion, for instance "Fe II".')
-@click.option("--redshift", type=click.FloatRange(min=-1.0, min_open=True), default=0.0,
-              help="Redshift of the absorber.")
-@click.option("--range", "wave_range", type=float, nargs=2, metavar="LOW HIGH",
-              help="Only lines observed in this range of vacuum wavelengths, Å.")
-@click.option("--spectrum", type=click.Path(path_type=Path),
-              help="Only lines covered by this spectrum, with their signal-to-noise ratio.")
+@click.option(
+    "--redshift",
+    type=click.FloatRange(min=-1.0, min_open=True),
+    default=0.0,
+    help="Redshift of the absorber.",
+)
+@click.option(
+    "--range",
+    "wave_range",
+    type=float,
+    nargs=2,
+    metavar="LOW HIGH",
+    help="Only lines observed in this range of vacuum wavelengths, Å.",
+)
+@click.option(
+    "--spectrum",
+    type=click.Path(path_type=Path),
+    help="Only lines covered by this spectrum, with their signal-to-noise ratio.",
+)
 @click.option("--extra", is_flag=True, help="Also lines without a sensitivity coefficient.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON.")
 def lines(
@@ -50,29 +63,38 @@ def lines(
 
     atoms = load_atomic_data()
     if ion is not None and not atoms.find(ion=ion, extra=True):
-        raise click.UsageError(
-            f"no ion {ion!r} in the table; it has {', '.join(atoms.ions())}"
-        )
+        raise click.UsageError(f"no ion {ion!r} in the table; it has {', '.join(atoms.ions())}")
     data = None
     if spectrum is not None:
         from fathomline.spectra import read_spectrum
 
         data = read_spectrum(spectrum)
         covered = (float(data.wavelength[0]), float(data.wavelength[-1]))
-        wave_range = covered if wave_range is None else (
-            max(covered[0], wave_range[0]), min(covered[1], wave_range[1])
+        wave_range = (
+            covered
+            if wave_range is None
+            else (max(covered[0], wave_range[0]), min(covered[1], wave_range[1]))
         )
     found = atoms.find(ion=ion, wavelength=wave_range, redshift=redshift, extra=extra)
     rows = [_row(transition, redshift, atoms, data) for transition in found]
     if as_json:
         print(json.dumps(rows, ensure_ascii=False))
         return 0
-    header = ("transition", "rest (Å)", "observed (Å)", "f", "q (cm⁻¹)", "shift (m/s per ppm)",
-              "components")
+    header: tuple[str, ...] = (
+        "transition",
+        "rest (Å)",
+        "observed (Å)",
+        "f",
+        "q (cm⁻¹)",
+        "shift (m/s per ppm)",
+        "components",
+    )
     if data is not None:
         header = (*header, "S/N", "trouble")
     print_table(
-        f"{len(rows)} transitions", header, [_cells(row, with_data=data is not None) for row in rows]
+        f"{len(rows)} transitions",
+        header,
+        [_cells(row, with_data=data is not None) for row in rows],
     )
     return 0
 
@@ -106,9 +128,7 @@ def _trouble(observed: float, atoms: AtomicData, data: Spectrum) -> dict[str, An
         notes.append("no good pixel")
     elif good.sum() < inside.sum():
         notes.append(f"{int(inside.sum() - good.sum())} masked pixels")
-    notes += [
-        f"telluric {r.molecule} ({r.strength})" for r in atoms.telluric_overlap((low, high))
-    ]
+    notes += [f"telluric {r.molecule} ({r.strength})" for r in atoms.telluric_overlap((low, high))]
     level = data.flux if data.continuum is None else data.continuum
     snr = float(np.median(level[good] / data.error[good])) if good.any() else None
     return {"snr": snr, "trouble": notes}

@@ -7,6 +7,7 @@ finished, but the result is flagged as not trustworthy; 130 interrupted.
 from __future__ import annotations
 
 import importlib
+import os
 import sys
 from typing import Any
 
@@ -60,7 +61,12 @@ def main(arguments: list[str] | None = None) -> None:
     ----------
     arguments : list of str, optional
         Default: those of the process.
+
     """
+    # numpy is not imported yet. Its threads slow the small matrices of a fit down, several times
+    # so when other work shares the cores; whoever wants them sets the variable.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    os.environ.setdefault("OMP_NUM_THREADS", "1")
     sys.exit(_run(arguments))
 
 

@@ -26,8 +26,13 @@ Example:
 
 @click.command(epilog=_EPILOG)
 @click.argument("jobs", metavar="JOB...", nargs=-1, required=True, type=click.Path(path_type=Path))
-@click.option("-o", "--output", metavar="FOLDER", type=click.Path(path_type=Path),
-              help="Result folder; default: JOB with the ending .result.")
+@click.option(
+    "-o",
+    "--output",
+    metavar="FOLDER",
+    type=click.Path(path_type=Path),
+    help="Result folder; default: JOB with the ending .result.",
+)
 @click.option("--json", "as_json", is_flag=True, help="Print the rows as JSON.")
 def measure(jobs: tuple[Path, ...], output: Path | None, as_json: bool) -> int:
     """Fit each JOB and write its result folder: tables, model, figures, report.
@@ -64,34 +69,50 @@ def _print_row(measurement: Measurement, folder: Path, *, as_json: bool) -> None
 
     fit, absorber = measurement.fit, measurement.job.absorber
     if as_json:
-        print(json.dumps({
-            "absorber": absorber.name,
-            "z_abs": absorber.redshift,
-            "dalpha_ppm": measurement.dalpha,
-            "stat_ppm": measurement.stat,
-            "chi2_nu": fit.chi2_nu,
-            "ndof": fit.ndof,
-            "n_components": len(measurement.job.components),
-            "converged": fit.converged,
-            "flags": list(measurement.flags),
-            "result": str(folder),
-        }, ensure_ascii=False))
+        print(
+            json.dumps(
+                {
+                    "absorber": absorber.name,
+                    "z_abs": absorber.redshift,
+                    "dalpha_ppm": measurement.dalpha,
+                    "stat_ppm": measurement.stat,
+                    "chi2_nu": fit.chi2_nu,
+                    "ndof": fit.ndof,
+                    "n_components": len(measurement.job.components),
+                    "converged": fit.converged,
+                    "flags": list(measurement.flags),
+                    "result": str(folder),
+                },
+                ensure_ascii=False,
+            )
+        )
         return
     print_table(
         "",
-        ("absorber", "z", "Δα/α (ppm)", "stat (ppm)", "χ²/ν", "ν", "components", "converged",
-         "flags"),
-        [(
-            absorber.name,
-            f"{absorber.redshift:g}",
-            f"{measurement.dalpha:.3f}",
-            "none" if measurement.stat is None else f"{measurement.stat:.3f}",
-            "none" if fit.chi2_nu is None else f"{fit.chi2_nu:.3f}",
-            str(fit.ndof),
-            str(len(measurement.job.components)),
-            "yes" if fit.converged else "no",
-            ", ".join(measurement.flags),
-        )],
+        (
+            "absorber",
+            "z",
+            "Δα/α (ppm)",
+            "stat (ppm)",
+            "χ²/ν",
+            "ν",
+            "components",
+            "converged",
+            "flags",
+        ),
+        [
+            (
+                absorber.name,
+                f"{absorber.redshift:g}",
+                f"{measurement.dalpha:.3f}",
+                "none" if measurement.stat is None else f"{measurement.stat:.3f}",
+                "none" if fit.chi2_nu is None else f"{fit.chi2_nu:.3f}",
+                str(fit.ndof),
+                str(len(measurement.job.components)),
+                "yes" if fit.converged else "no",
+                ", ".join(measurement.flags),
+            )
+        ],
     )
     for flag, meaning in measurement.flag_meanings().items():
         print(f"{flag}: {meaning}", file=sys.stderr)

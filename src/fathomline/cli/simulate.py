@@ -17,15 +17,32 @@ Example:
 
 @click.command(epilog=_EPILOG)
 @click.argument("job_file", metavar="JOB", type=click.Path(path_type=Path))
-@click.option("-o", "--output", metavar="FOLDER", required=True, type=click.Path(path_type=Path),
-              help="Folder for the spectra and the job that fits them; must not hold such files.")
-@click.option("--snr", type=click.FloatRange(min=0.0, min_open=True), default=100.0,
-              show_default=True, help="Signal-to-noise ratio per pixel; inf for no noise.")
-@click.option("--pixel", type=click.FloatRange(min=0.05, max=50.0), default=2.0, show_default=True,
-              help="Pixel size, km/s, where the job's spectrum does not exist.")
+@click.option(
+    "-o",
+    "--output",
+    metavar="FOLDER",
+    required=True,
+    type=click.Path(path_type=Path),
+    help="Folder for the spectra and the job that fits them; must not hold such files.",
+)
+@click.option(
+    "--snr",
+    type=click.FloatRange(min=0.0, min_open=True),
+    default=100.0,
+    show_default=True,
+    help="Signal-to-noise ratio per pixel; inf for no noise.",
+)
+@click.option(
+    "--pixel",
+    type=click.FloatRange(min=0.05, max=50.0),
+    default=2.0,
+    show_default=True,
+    help="Pixel size, km/s, where the job's spectrum does not exist.",
+)
 @click.option("--dalpha", type=float, help="Δα/α, ppm; default: the start value of the job.")
-@click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True,
-              help="Seed of the noise.")
+@click.option(
+    "--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Seed of the noise."
+)
 def simulate(
     job_file: Path, output: Path, snr: float, pixel: float, dalpha: float | None, seed: int
 ) -> int:
@@ -40,7 +57,8 @@ def simulate(
 
     job = read_job(job_file, check_files=False)
     noise = Noise(snr=snr, seed=seed)
-    for path in simulate_to_folder(job, job_file.name, output, noise, pixel=pixel,
-                                   dalpha_ppm=dalpha):
+    for path in simulate_to_folder(
+        job, job_file.name, output, noise, pixel=pixel, dalpha_ppm=dalpha
+    ):
         print(path)
     return 0

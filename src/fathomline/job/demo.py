@@ -45,6 +45,7 @@ def write_demo(folder: Path) -> Path:
     ------
     ResultError
         The folder cannot be made, or holds another job of that name.
+
     """
     job_file, text = folder / "halden-a.toml", demo_text()
     try:

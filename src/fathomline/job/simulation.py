@@ -41,6 +41,7 @@ class Noise:
         Signal-to-noise ratio per pixel in the continuum; `math.inf` for none (then the error
         column is that of a ratio of 1e4).
     seed : int
+
     """
 
     snr: float = 100.0
@@ -49,9 +50,10 @@ class Noise:
 
 def clouds_of(job: Job) -> list[Cloud]:
     """The components of a job at their start values."""
+    start = job.start_values()
 
     def value(k: int, quantity: str, ion: str | None = None) -> float:
-        return job.start_value(Reference("component", k, quantity, ion))
+        return start[Reference("component", k, quantity, ion)]
 
     def cloud(k: int, component: Component) -> Cloud:
         width = "b" if component.b is not None else "b_turb"
@@ -72,6 +74,7 @@ def synthetic_grid(job: Job, atoms: AtomicData, spectrum: str, pixel: float) -> 
     ------
     JobError
         No region draws on the spectrum.
+
     """
     z = job.absorber.redshift
     limits = [
@@ -111,8 +114,10 @@ def _transmission(
     z = redshift
     ions = {ion for cloud in clouds for ion in cloud.log_columns}
     lines: list[Transition] = [
-        t for ion in ions for t in atoms.find(ion=ion, extra=True) if t.ground
-        and edges[0] < t.observed_wavelength(z) < edges[-1]
+        t
+        for ion in ions
+        for t in atoms.find(ion=ion, extra=True)
+        if t.ground and edges[0] < t.observed_wavelength(z) < edges[-1]
     ]
     fastest = max(abs(cloud.velocity) for cloud in clouds)
     out = np.ones(edges.size - 1)
@@ -154,8 +159,10 @@ def simulate(
     -------
     tuple of Spectrum
         Flux 1 in the continuum, continuum column included.
+
     """
-    alpha = job.start_value(Reference("alpha", 0, "dalpha")) if dalpha_ppm is None else dalpha_ppm
+    start = job.start_values()
+    alpha = start[Reference("alpha", 0, "dalpha")] if dalpha_ppm is None else dalpha_ppm
     clouds = clouds_of(job) if clouds is None else clouds
     children = np.random.SeedSequence(noise.seed).spawn(len(job.spectra))
     spectra = []
@@ -164,7 +171,7 @@ def simulate(
         if resolution.R is not None:
             fwhm = C_KMS / resolution.R
         else:
-            fwhm = job.start_value(Reference("spectrum", i, "fwhm"))
+            fwhm = start[Reference("spectrum", i, "fwhm")]
         flux = _transmission(job.absorber.redshift, clouds, atoms, pixels, fwhm, alpha)
         sigma = np.full(flux.size, 1e-4 if math.isinf(noise.snr) else 1.0 / noise.snr)
         if not math.isinf(noise.snr):
@@ -175,7 +182,6 @@ def simulate(
             )
         )
     return tuple(spectra)
-
 
 
 def simulate_to_folder(
@@ -206,13 +212,16 @@ def simulate_to_folder(
     ------
     ResultError
         A file is already there, or the folder cannot be written.
+
     """
     atoms = load_atoms(job)
     files = [folder / f"{table.id}.fits" for table in job.spectra]
     job_path = folder / job_name
     for path in (*files, job_path):
         if path.exists():
-            raise ResultError(f"{path}: is already there and is not overwritten; use another folder")
+            raise ResultError(
+                f"{path}: is already there and is not overwritten; use another folder"
+            )
     edges = [
         load_spectrum(job, i).edges
         if job.spectrum_path(i).exists()

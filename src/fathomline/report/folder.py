@@ -57,6 +57,7 @@ def check_target(folder: Path) -> None:
     ------
     ResultError
         The message says what is in the way.
+
     """
     if folder.exists() and not folder.is_dir():
         raise ResultError(f"{folder}: is a file; name another folder with -o")
@@ -111,6 +112,7 @@ def write_result(measurement: Measurement, folder: Path, *, command: str = "") -
     ------
     ResultError
         The folder cannot be written; what was there before is unchanged.
+
     """
     check_target(folder)
     with _replacing(folder) as fresh:
@@ -158,8 +160,11 @@ def _write_model(measurement: Measurement, path: Path) -> None:
                 fits.Column("MODEL", "D", array=prediction.flux),
                 fits.Column("CONTINUUM", "D", array=prediction.continuum),
                 fits.Column("RESIDUAL", "D", array=prediction.residual),
-                fits.Column("COMPONENTS", f"{prediction.components.shape[0]}D",
-                            array=np.ascontiguousarray(prediction.components.T)),
+                fits.Column(
+                    "COMPONENTS",
+                    f"{prediction.components.shape[0]}D",
+                    array=np.ascontiguousarray(prediction.components.T),
+                ),
             ],
             name=f"REGION{segment.region + 1}",
         )

@@ -55,21 +55,38 @@ def measurement_table(m: Measurement) -> Table:
             ("ra", "deg", "right ascension, ICRS", [absorber.ra]),
             ("dec", "deg", "declination, ICRS", [absorber.dec]),
             ("z_abs", None, "redshift of zero velocity", [absorber.redshift]),
-            ("n_transitions", None, "transitions fitted",
-             [len({t.name for t in m.built.transitions})]),
+            (
+                "n_transitions",
+                None,
+                "transitions fitted",
+                [len({t.name for t in m.built.transitions})],
+            ),
             ("n_components", None, "velocity components", [len(m.job.components)]),
             ("n_free", None, "free parameters", [fit.n_free]),
             ("dalpha_ppm", None, "relative change of alpha, 1e-6", [m.dalpha]),
             ("stat_ppm", None, "statistical error, 1 sigma, 1e-6", [m.stat]),
-            ("sys_ppm", None, "systematic error, 1 sigma, 1e-6; masked: no budget was made", [None]),
+            (
+                "sys_ppm",
+                None,
+                "systematic error, 1 sigma, 1e-6; masked: no budget was made",
+                [None],
+            ),
             ("total_ppm", None, "total error, 1 sigma, 1e-6; masked: no budget was made", [None]),
             ("chi2", None, "chi squared of pixels and priors", [fit.chi2]),
             ("ndof", None, "degrees of freedom", [fit.ndof]),
             ("chi2_nu", None, "chi squared per degree of freedom", [fit.chi2_nu]),
-            ("aicc", None, "Akaike criterion with small-sample term",
-             [fit.aicc if np.isfinite(fit.aicc) else None]),
-            ("converged", None, "minimum reached, and every restart returned to it",
-             [fit.converged]),
+            (
+                "aicc",
+                None,
+                "Akaike criterion with small-sample term",
+                [fit.aicc if np.isfinite(fit.aicc) else None],
+            ),
+            (
+                "converged",
+                None,
+                "minimum reached, and every restart returned to it",
+                [fit.converged],
+            ),
             ("blinded", None, "whether dalpha_ppm is hidden", [False]),
             ("flags", None, "comma-separated; empty: nothing to report", [",".join(m.flags)]),
             ("fathomline_version", None, "version of the program", [fathomline.__version__]),
@@ -82,18 +99,24 @@ def measurement_table(m: Measurement) -> Table:
 def budget_table(m: Measurement) -> Table:
     """One row per term of the error budget; for now the statistical one."""
     reason = "" if m.stat is not None else ",".join(m.fit.flags)
-    return _table([
-        ("term", None, "name of the term", ["statistical"]),
-        ("kind", None, "statistical or systematic", ["statistical"]),
-        ("shift_ppm", None, "shift of dalpha/alpha, 1e-6", [None]),
-        ("sigma_ppm", None, "1 sigma error, 1e-6", [m.stat]),
-        ("method", None, "how it was found", ["covariance"]),
-        ("n_refits", None, "refits behind it", [0]),
-        ("shared", None, "tag shared with other absorbers", [""]),
-        ("response_ppm", None, "signed shift per unit of the shared error, 1e-6", [None]),
-        ("note", None, "remark",
-         [reason or "photon noise with every free parameter marginalised"]),
-    ])
+    return _table(
+        [
+            ("term", None, "name of the term", ["statistical"]),
+            ("kind", None, "statistical or systematic", ["statistical"]),
+            ("shift_ppm", None, "shift of dalpha/alpha, 1e-6", [None]),
+            ("sigma_ppm", None, "1 sigma error, 1e-6", [m.stat]),
+            ("method", None, "how it was found", ["covariance"]),
+            ("n_refits", None, "refits behind it", [0]),
+            ("shared", None, "tag shared with other absorbers", [""]),
+            ("response_ppm", None, "signed shift per unit of the shared error, 1e-6", [None]),
+            (
+                "note",
+                None,
+                "remark",
+                [reason or "photon noise with every free parameter marginalised"],
+            ),
+        ]
+    )
 
 
 def components_table(m: Measurement) -> Table:
@@ -123,8 +146,7 @@ def components_table(m: Measurement) -> Table:
     add("temperature", "K", "kinetic temperature", "temperature")
     add("b_turb", "km / s", "turbulent part of the Doppler parameter", "b_turb")
     for ion in dict.fromkeys(ion for component in components for ion in component.logN):
-        add(f"logN {ion}", None, f"log10 of the column density of {ion} in cm-2",
-            f'logN["{ion}"]')
+        add(f"logN {ion}", None, f"log10 of the column density of {ion} in cm-2", f'logN["{ion}"]')
     columns.append(("note", None, "why an error is missing", [", ".join(n) for n in notes]))
     return _table(columns, absorber=m.job.absorber.name)
 
@@ -132,21 +154,44 @@ def components_table(m: Measurement) -> Table:
 def transitions_table(m: Measurement) -> Table:
     """One row per region: pixels, signal-to-noise, share of the information, χ²."""
     shares = m.shares
-    return _table([
-        ("transition", None, "ion and label", [s.transition for s in shares]),
-        ("wavelength", "Angstrom", "observed vacuum wavelength at z_abs",
-         [t.observed_wavelength(m.job.absorber.redshift) for t in m.built.transitions]),
-        ("sensitivity", "m / s", "velocity shift per 1e-6 of dalpha/alpha",
-         [t.sensitivity for t in m.built.transitions]),
-        ("n_pixels", None, "pixels fitted", [s.n_pixels for s in shares]),
-        ("snr", None, "median signal-to-noise ratio per pixel at the continuum",
-         [s.snr for s in shares]),
-        ("information", None, "share of the information on dalpha/alpha; sums to 1",
-         [s.information for s in shares]),
-        ("chi2", None, "chi squared of its pixels", [s.chi2 for s in shares]),
-        ("chi2_share", None, "chi squared over that of all pixels",
-         [s.chi2 / sum(r.chi2 for r in shares) for s in shares]),
-    ], absorber=m.job.absorber.name)
+    return _table(
+        [
+            ("transition", None, "ion and label", [s.transition for s in shares]),
+            (
+                "wavelength",
+                "Angstrom",
+                "observed vacuum wavelength at z_abs",
+                [t.observed_wavelength(m.job.absorber.redshift) for t in m.built.transitions],
+            ),
+            (
+                "sensitivity",
+                "m / s",
+                "velocity shift per 1e-6 of dalpha/alpha",
+                [t.sensitivity for t in m.built.transitions],
+            ),
+            ("n_pixels", None, "pixels fitted", [s.n_pixels for s in shares]),
+            (
+                "snr",
+                None,
+                "median signal-to-noise ratio per pixel at the continuum",
+                [s.snr for s in shares],
+            ),
+            (
+                "information",
+                None,
+                "share of the information on dalpha/alpha; sums to 1",
+                [s.information for s in shares],
+            ),
+            ("chi2", None, "chi squared of its pixels", [s.chi2 for s in shares]),
+            (
+                "chi2_share",
+                None,
+                "chi squared over that of all pixels",
+                [s.chi2 / sum(r.chi2 for r in shares) for s in shares],
+            ),
+        ],
+        absorber=m.job.absorber.name,
+    )
 
 
 def covariance_table(m: Measurement) -> Table:
@@ -157,13 +202,24 @@ def covariance_table(m: Measurement) -> Table:
         ("parameter", None, "name", list(names)),
         ("value", None, "best value", [m.fit.values[name] for name in names]),
         ("sigma", None, "1 sigma error", [covariance.sigma(name) for name in names]),
-        ("note", None, "why an error is missing",
-         [covariance.reasons.get(name, "") for name in names]),
+        (
+            "note",
+            None,
+            "why an error is missing",
+            [covariance.reasons.get(name, "") for name in names],
+        ),
     ]
     for j, name in enumerate(names):
         lost = name in covariance.reasons
-        columns.append((name, None, f"covariance with {name}", [
-            None if lost or other in covariance.reasons else float(covariance.matrix[i, j])
-            for i, other in enumerate(names)
-        ]))
+        columns.append(
+            (
+                name,
+                None,
+                f"covariance with {name}",
+                [
+                    None if lost or other in covariance.reasons else float(covariance.matrix[i, j])
+                    for i, other in enumerate(names)
+                ],
+            )
+        )
     return _table(columns, absorber=m.job.absorber.name, alpha=ALPHA)

@@ -24,6 +24,7 @@ def write_spectrum(spectrum: Spectrum, path: Path, *, comment: str = "") -> None
         Replaced if it exists.
     comment : str
         One line for the header.
+
     """
     from astropy.io import fits
 
