@@ -1,5 +1,6 @@
 import itertools
 import re
+from dataclasses import replace
 
 import matplotlib
 import numpy as np
@@ -10,7 +11,13 @@ from matplotlib.text import Text
 from fathomline.report import residual_summary, save_figures, velocity_stack
 from fathomline.report.figures import composite_residual, render_figure
 from fathomline.report.marks import place_marks, spread
-from fathomline.report.panels import flux_limits, measurement_panels, steps
+from fathomline.report.panels import (
+    draw_flux,
+    draw_residuals,
+    flux_limits,
+    measurement_panels,
+    steps,
+)
 from fathomline.report.style import SMALL_TEXT
 from report_support import small_measurement
 
@@ -122,6 +129,26 @@ def test_a_weak_line_gets_a_magnified_axis_that_says_so(measurement):
     assert high > 1.0
     written = [text.get_text() for text, _ in shown_texts(velocity_stack(measurement))]
     assert any(f"axis from {low:g}" in text for text in written)
+
+
+def test_masked_pixels_without_a_number_and_wild_values_can_be_drawn(measurement):
+    panel = measurement_panels(measurement)[0]
+    data, error = panel.segment.data.copy(), panel.segment.error.copy()
+    good, residual = panel.segment.good.copy(), panel.prediction.residual.copy()
+    good[5:12] = False
+    data[5:8], data[8:12], error[5:12] = np.nan, np.inf, -1.0
+    residual[5:12] = np.nan
+    data[20], residual[20], residual[21] = 1e6, 1e8, -1e8  # a fitted outlier
+    segment = replace(panel.segment, data=data, error=error, good=good)
+    strange = replace(
+        panel, segment=segment, prediction=replace(panel.prediction, residual=residual)
+    )
+    figure = velocity_stack(measurement)
+    flux, strip = figure.axes[1:3]
+    draw_flux(flux, strange, (0.5, 1.1))
+    draw_residuals(strip, strange)
+    assert flux.get_ylim() == (0.5, 1.1)
+    assert len(render_figure(figure, "svg")) < 3_000_000
 
 
 def test_a_wrong_number_of_columns_is_refused(measurement):

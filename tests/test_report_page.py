@@ -149,6 +149,17 @@ def test_a_missing_error_has_its_reason(measurement):
     assert "a component parameter lies at a bound" in text
 
 
+def test_a_column_density_without_a_measurement_keeps_its_digits(measurement):
+    covariance = measurement.fit.covariance
+    i = covariance.names.index('component[4].logN["Fe II"]')
+    matrix = covariance.matrix.copy()
+    matrix[i, i] = 1.2e4**2
+    fit = replace(measurement.fit, covariance=replace(covariance, matrix=matrix))
+    text = render_report(replace(measurement, fit=fit))
+    assert "error 12000 dex: not constrained" in text
+    assert f"{fit.values[covariance.names[i]]:.2f}" in text
+
+
 def test_a_fit_without_restarts_does_not_claim_convergence(measurement):
     fit = replace(measurement.fit, restarts=())
     text = render_report(replace(measurement, fit=fit))

@@ -38,6 +38,8 @@ _NO_SOURCE = "the transition table itself, which names no source of its own for 
 
 _FROM = {"file": "stated in the file", "argument": "stated in the job", "guess": "assumed"}
 
+_VAGUE_COLUMN = 3.0  # dex; rounding log N to such an error would leave no digit of it
+
 _WHY = {
     "fixed": "fixed",
     "at bound": "no error: at bound",
@@ -104,6 +106,9 @@ def _cell(m: Measurement, name: str) -> Cell:
     if isinstance(error, str):
         why = _WHY.get(error, error)
         return Cell(plain_number(value), f"{remark}; {why}" if remark else why)
+    if ".logN[" in name and error > _VAGUE_COLUMN:
+        vague = f"error {plain_number(error, 2)} dex: not constrained"
+        return Cell(plain_number(value), f"{remark}; {vague}" if remark else vague)
     return Cell(value_with_error(value, error), remark)
 
 

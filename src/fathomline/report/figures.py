@@ -59,7 +59,7 @@ _HEADER, _STRIP, _GAP, _BOTTOM = 3.6, 8.5, 2.4, 8.5
 _PANEL, _LEAST_PANEL, _PAGE = 23.0, 16.0, 235.0
 _ROOM_FOR_LABEL = 21.0
 _LEGEND_ROW = 3.6
-_SEPARATOR = "  ·  "
+_SEPARATOR = " · "
 
 
 @dataclass(frozen=True, slots=True)
