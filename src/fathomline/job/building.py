@@ -276,9 +276,9 @@ class _Builder:
                 found.append(segment)
         if not found and reasons:
             covered = any("all masked" in reason for reason in reasons)
-            problem = "has no good pixel" if covered else "is not covered"
+            problem = "has no good pixel in" if covered else "is not covered by"
             self.fault(
-                f"[[region]] {i + 1}: {transition.name} at {centre:.2f} Å {problem} by the "
+                f"[[region]] {i + 1}: {transition.name} at {centre:.2f} Å {problem} the "
                 f"{'named ' if named is not None else ''}spectra: {'; '.join(reasons)}",
                 "region",
                 i,

@@ -5,7 +5,7 @@ from __future__ import annotations
 import platform
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime
 from importlib import metadata
 from typing import Any
@@ -293,20 +293,23 @@ def _fit_with_fine_enough_grid(
     # restarts are for the final model: a first fit without them finds out how fine the grid must be
     model = built.model
     start: Array = model.parameters.start
-    resamplings = 0
+    resamplings = iterations = evaluations = 0
     while True:
-        first = fit_model(model, _without_restarts(settings), start=start, progress=tell)
+        first = fit_model(model, replace(settings, restarts=0), start=start, progress=tell)
+        iterations += first.n_iterations
+        evaluations += first.n_evaluations
         finer = model.resampled(first.free, refine=1.0)
         if finer is None or resamplings == _MAX_RESAMPLINGS:
             break
         model, start, resamplings = finer, first.free, resamplings + 1
     fit = fit_model(model, settings, start=first.free, progress=tell)
+    fit = replace(
+        fit,
+        n_iterations=fit.n_iterations + iterations,
+        n_evaluations=fit.n_evaluations + evaluations,
+    )
     return (
         BuiltModel(built.job, built.spectra, built.atoms, model, built.transitions),
         fit,
         resamplings,
     )
-
-
-def _without_restarts(settings: FitSettings) -> FitSettings:
-    return FitSettings(settings.solver, 0, settings.max_iterations, settings.seed)
