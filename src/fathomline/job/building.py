@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from fathomline.atomic import AtomicData, Transition, load_atomic_data
 from fathomline.constants import C_KMS, DOPPLER_KMS2
 from fathomline.errors import AtomicDataError, JobError, SpectrumError
-from fathomline.job.number import QUANTITIES, Number, Reference
+from fathomline.job.number import QUANTITIES, Number, Reference, resolve
 from fathomline.job.schema import Component, Job, Region
 from fathomline.job.schema import Spectrum as SpectrumTable
 from fathomline.model import (
@@ -121,6 +121,7 @@ class _Builder:
 
     def __init__(self, job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> None:
         self.job, self.spectra, self.atoms = job, spectra, atoms
+        self.numbers = job.numbers()  # once: collecting them anew per line is slow
         self.parameters: list[Parameter] = []
         self.faults: list[str] = []
         self.bounds = {s.name: s.bounds() for s in spectra}
@@ -341,7 +342,9 @@ class _Builder:
         centre: float, wavelength: NDArray[np.float64],
     ) -> bool:
         def value(quantity: str, ion: str | None = None) -> float:
-            return self.job.start_value(Reference("component", k, quantity, ion))
+            start = resolve(self.numbers, Reference("component", k, quantity, ion))
+            assert start is not None  # a checked job has no tie without an end
+            return start
 
         if component.b is not None:
             b = value("b")
