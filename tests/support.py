@@ -35,8 +35,9 @@ def ridders(f: Callable[[float], np.ndarray], x: float, step: float) -> np.ndarr
         factor = shrink**2
         for j in range(1, i + 1):
             refined = (factor * table[i][j - 1] - table[i - 1][j - 1]) / (factor - 1.0)
-            error = np.maximum(np.abs(refined - table[i][j - 1]),
-                               np.abs(refined - table[i - 1][j - 1]))
+            error = np.maximum(
+                np.abs(refined - table[i][j - 1]), np.abs(refined - table[i - 1][j - 1])
+            )
             table[i].append(refined)
             factor *= shrink**2
             if best is None:
@@ -55,7 +56,9 @@ def pixels(rest: float, redshift: float, window: tuple[float, float], step: floa
     return np.sqrt(edges[:-1] * edges[1:]), edges[:-1], edges[1:]
 
 
-def small_model(*, structure: str = "isotopic", seed: int = 3, noise: float = 0.01) -> AbsorberModel:
+def small_model(
+    *, structure: str = "isotopic", seed: int = 3, noise: float = 0.01
+) -> AbsorberModel:
     """Four components, five transitions: turbulent, thermal, both, ties, priors, masks.
 
     The data are noise around 0.7: derivatives do not care.
@@ -84,8 +87,9 @@ def small_model(*, structure: str = "isotopic", seed: int = 3, noise: float = 0.
             b_turb = put(f"bt{k}", 2.0, lower=0.0) if width == "T+b" else None
         columns = {
             "Mg II": put(f"Mg{k}", 12.6 + 0.3 * k),
-            "Fe II": put(f"Fe{k}", 12.3 + 0.35 * k) if k != 2 else
-            put(f"Fe{k}", 0.0, tie=Tie("Fe1", 1.0, 0.1)),
+            "Fe II": put(f"Fe{k}", 12.3 + 0.35 * k)
+            if k != 2
+            else put(f"Fe{k}", 0.0, tie=Tie("Fe1", 1.0, 0.1)),
         }
         components.append(ComponentTerms(velocity, columns, b, temperature, b_turb))
     segments = []
@@ -97,12 +101,53 @@ def small_model(*, structure: str = "isotopic", seed: int = 3, noise: float = 0.
         good = rng.random(wave.size) > 0.1
         continuum = (put(f"c{region}0", 1.0), put(f"c{region}1", 0.02))
         zero = put(f"z{region}", 0.01) if region == 1 else None
-        segments.append(SegmentTerms(
-            region, name, "one", wave, low, high,
-            data=0.7 + noise * rng.standard_normal(wave.size),
-            error=np.full(wave.size, noise), good=good,
-            lines=((transition.ion, TransitionLines(transition)),),
-            continuum=continuum, zero_level=zero, fwhm=fwhm,
-            window=(-80.0, 80.0), rest=transition.wavelength,
-        ))
+        segments.append(
+            SegmentTerms(
+                region,
+                name,
+                "one",
+                wave,
+                low,
+                high,
+                data=0.7 + noise * rng.standard_normal(wave.size),
+                error=np.full(wave.size, noise),
+                good=good,
+                lines=((transition.ion, TransitionLines(transition)),),
+                continuum=continuum,
+                zero_level=zero,
+                fwhm=fwhm,
+                window=(-80.0, 80.0),
+                rest=transition.wavelength,
+            )
+        )
     return AbsorberModel(redshift, ParameterSet(parameters), alpha, components, segments)
+
+
+def single_line_model(transition, wave, low, high, *, redshift, velocity, b, logn, fwhm, dalpha):
+    """One component in one transition, continuum held at 1."""
+    parameters = [
+        Parameter("dalpha", dalpha),
+        Parameter("fwhm", fwhm, fixed=True),
+        Parameter("v", velocity),
+        Parameter("b", b),
+        Parameter("logN", logn),
+    ]
+    segment = SegmentTerms(
+        0,
+        transition.name,
+        "one",
+        wave,
+        low,
+        high,
+        np.ones(wave.size),
+        np.full(wave.size, 0.01),
+        np.ones(wave.size, dtype=bool),
+        ((transition.ion, TransitionLines(transition)),),
+        continuum=(),
+        zero_level=None,
+        fwhm=1,
+        window=(-1.0, 1.0),
+        rest=transition.wavelength,
+    )
+    component = ComponentTerms(2, {transition.ion: 4}, b=3)
+    return AbsorberModel(redshift, ParameterSet(parameters), 0, [component], [segment])

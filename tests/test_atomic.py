@@ -17,7 +17,7 @@ STRUCTURED = [t for t in ATOMS.transitions if t.structure]
 
 def test_constants_are_codata():
     # scipy.constants carries CODATA; the sets of 2018 and 2022 differ by up to 2e-9
-    assert constants.C_MS == si.c
+    assert si.c == constants.C_MS
     assert math.isclose(constants.BOLTZMANN, si.k, rel_tol=1e-12)
     assert math.isclose(constants.UNIFIED_MASS, si.atomic_mass, rel_tol=5e-9)
     strength = si.e**2 / (4 * si.epsilon_0 * si.m_e * si.c)  # π e²/(m_e c) in SI, m²/s
@@ -92,7 +92,7 @@ KING_SHIFTS = {
 
 @pytest.mark.parametrize("name", KING_SHIFTS)
 def test_shift_by_alpha_against_published_coefficients(name):
-    wavelength, q, shift = KING_SHIFTS[name]
+    _, q, shift = KING_SHIFTS[name]
     transition = ATOMS[name]
     assert transition.q == q  # these q did not change since
     assert transition.sensitivity is not None
@@ -140,7 +140,7 @@ def test_composite_tables_have_no_structure():
 
 
 def test_unknown_transition_names_the_nearest():
-    with pytest.raises(AtomicDataError, match="did you mean .*Fe II 2382"):
+    with pytest.raises(AtomicDataError, match=r"did you mean .*Fe II 2382"):
         ATOMS["Fe II 2383"]
 
 
@@ -149,10 +149,16 @@ def test_unknown_transition_names_the_nearest():
     [
         ("transitions", "ion,transition\nFe II,2382\n", r"transitions.ecsv:2: missing column"),
         ("transitions", "", r"transitions.ecsv: the table is empty"),
-        ("isotopes", "element,mass_number,mass,abundance,source\nMg,24,abc,0.7,x\n",
-         r"isotopes.ecsv:3: column 'mass': expected a number, found 'abc'"),
-        ("telluric", "wave_min,wave_max,molecule,strength\n1,2,O2\n",
-         r"telluric.ecsv:3: expected 4 fields, found 3"),
+        (
+            "isotopes",
+            "element,mass_number,mass,abundance,source\nMg,24,abc,0.7,x\n",
+            r"isotopes.ecsv:3: column 'mass': expected a number, found 'abc'",
+        ),
+        (
+            "telluric",
+            "wave_min,wave_max,molecule,strength\n1,2,O2\n",
+            r"telluric.ecsv:3: expected 4 fields, found 3",
+        ),
     ],
 )
 def test_broken_tables_name_file_and_line(tmp_path, file, text, message):
@@ -160,8 +166,9 @@ def test_broken_tables_name_file_and_line(tmp_path, file, text, message):
 
     for path in built_in_folder().glob("*.ecsv"):
         (tmp_path / path.name).write_text(path.read_text(encoding="utf-8"), encoding="utf-8")
-    (tmp_path / f"{file}.ecsv").write_text("# delimiter: ','\n" + text if text else "",
-                                           encoding="utf-8")
+    (tmp_path / f"{file}.ecsv").write_text(
+        "# delimiter: ','\n" + text if text else "", encoding="utf-8"
+    )
     with pytest.raises(AtomicDataError, match=message):
         load_atomic_data(folder=tmp_path)
 

@@ -7,17 +7,53 @@ import math
 import mpmath
 import numpy as np
 import pytest
-from support import ridders
 
 from fathomline.atomic import LineComponent, Transition
 from fathomline.job.synthesis import Cloud, equivalent_width
-from fathomline.profile import TransitionLines, voigt, voigt_with_derivatives
+from fathomline.profile import FineGrid, TransitionLines, voigt, voigt_core, voigt_wing
+from support import ridders
 
 A_GRID = [0.0, 1e-8, 1e-6, 1e-5, 1e-4, 5e-4, 1e-3, 3e-3, 0.01, 0.03, 0.1, 0.3, 1.0, 3.0, 10.0]
-U_GRID = sorted({
-    0.0, 1e-6, 1e-3, 0.1, 0.3, 0.7, 1.0, 1.3, 1.7, 2.0, 2.4, 2.8, 3.1, 3.5, 3.9, 4.3, 4.7, 5.1, 5.5,
-    5.9, 6.0, 6.5, 7.0, 8.0, 9.5, 11.0, 14.0, 18.0, 25.0, 27.9, 28.1, 40.0, 70.0, 100.0, 300.0, 1e3,
-})
+U_GRID = sorted(
+    {
+        0.0,
+        1e-6,
+        1e-3,
+        0.1,
+        0.3,
+        0.7,
+        1.0,
+        1.3,
+        1.7,
+        2.0,
+        2.4,
+        2.8,
+        3.1,
+        3.5,
+        3.9,
+        4.3,
+        4.7,
+        5.1,
+        5.5,
+        5.9,
+        6.0,
+        6.5,
+        7.0,
+        8.0,
+        9.5,
+        11.0,
+        14.0,
+        18.0,
+        25.0,
+        27.9,
+        28.1,
+        40.0,
+        70.0,
+        100.0,
+        300.0,
+        1e3,
+    }
+)
 
 
 def exact_faddeeva(a: float, u: float) -> mpmath.mpc:
@@ -28,7 +64,7 @@ def exact_faddeeva(a: float, u: float) -> mpmath.mpc:
             # erfc and exp over- and underflow by thousands of digits there: continued fraction
             # DLMF 7.9.4, w(z) = (i/√π) / (z − (1/2)/(z − 1/(z − (3/2)/(z − ...))))
             if a == 0.0:
-                return mpmath.mpc(mpmath.exp(-z.real**2), _dawson(u))
+                return mpmath.mpc(mpmath.exp(-(z.real**2)), _dawson(u))
             tail = z
             for k in range(400, 0, -1):
                 tail = z - mpmath.mpf(k) / 2 / tail
@@ -78,7 +114,7 @@ FADDEEVA = [
 
 @pytest.mark.parametrize(("a", "u", "real", "imaginary"), FADDEEVA)
 def test_tabulated_values(a, u, real, imaginary):
-    h, h_u, h_a = voigt_with_derivatives(np.array([a]), np.array([u]))
+    h, h_u, _, h_a = voigt_core(np.array([a]), np.array([[u]]), derivatives=True)[:, 0]
     assert h[0] == pytest.approx(real, rel=1e-6, abs=1e-14)
     # w' = −2 z w + 2i/√π (DLMF 7.10.2): both derivatives follow from both parts
     assert h_u[0] == pytest.approx(-2 * (u * real - a * imaginary), rel=1e-6, abs=1e-10)
@@ -89,21 +125,48 @@ def test_tabulated_values(a, u, real, imaginary):
 @pytest.mark.parametrize("a", [1e-4, 0.003, 0.1, 2.0])
 def test_derivatives_against_adaptive_ones(a):
     u = np.linspace(-8.0, 8.0, 41)
-    _, h_u, h_a = voigt_with_derivatives(a, u)
+    _, h_u, u_h_u, h_a = voigt_core(np.array([a]), u[None, :], derivatives=True)[:, 0]
+    np.testing.assert_allclose(u_h_u, u * h_u, rtol=1e-14)
     np.testing.assert_allclose(h_u, ridders(lambda t: voigt(a, u + t), 0.0, 0.1), atol=1e-9)
     np.testing.assert_allclose(h_a, ridders(lambda t: voigt(t, u), a, a / 4), atol=1e-8)
 
 
+@pytest.mark.parametrize("a", [1e-6, 1e-4, 1e-3, 0.01])
+def test_wings_join_the_core(a):
+    """Beyond 8 Doppler widths the asymptotic series stands for the full function."""
+    u = np.array([[-300.0, -60.0, -14.0, -9.0, -8.0, 8.0, 8.5, 11.0, 30.0, 900.0]])
+    full = voigt_core(np.array([a]), u, derivatives=True)
+    wing = voigt_wing(np.array([a]), u, derivatives=True)
+    # 4e-6: the first term left out at u = 8; 1e-5 for its derivative; rounding of 1 − 2uD at 900
+    np.testing.assert_allclose(wing[0], full[0], rtol=5e-6)
+    for i in (1, 2, 3):
+        scale = np.abs(full[i]).max()
+        np.testing.assert_allclose(wing[i], full[i], rtol=5e-5, atol=1e-9 * scale)
+
+
 # Half curve-of-growth integrals, W/λ = 2 (b/c) F (Tatum, Stellar Atmospheres, §11.4 and §11.6)
 GAUSSIAN_GROWTH = [
-    (0.01, 0.00883102149402), (0.1, 0.0855728706534), (0.5, 0.374382891502),
-    (1.0, 0.642572260479), (2.0, 0.986344333126), (5.0, 1.41237272661), (10.0, 1.65687666918),
-    (100.0, 2.26027922556), (1000.0, 2.72643656471), (1e5, 3.47241680351),
+    (0.01, 0.00883102149402),
+    (0.1, 0.0855728706534),
+    (0.5, 0.374382891502),
+    (1.0, 0.642572260479),
+    (2.0, 0.986344333126),
+    (5.0, 1.41237272661),
+    (10.0, 1.65687666918),
+    (100.0, 2.26027922556),
+    (1000.0, 2.72643656471),
+    (1e5, 3.47241680351),
 ]
 VOIGT_GROWTH = [  # tau(u) = tau0 H(a,u)/H(a,0); six digits trusted
-    (1e-4, 1.0, 0.6426559), (1e-4, 100.0, 2.2632499), (1e-4, 1e4, 3.3130965),
-    (1e-3, 1.0, 0.64340885), (1e-3, 100.0, 2.289929), (1e-3, 1e4, 4.8584485),
-    (1e-2, 1.0, 0.65095475), (1e-2, 100.0, 2.5512603), (1e-2, 1e4, 13.478322),
+    (1e-4, 1.0, 0.6426559),
+    (1e-4, 100.0, 2.2632499),
+    (1e-4, 1e4, 3.3130965),
+    (1e-3, 1.0, 0.64340885),
+    (1e-3, 100.0, 2.289929),
+    (1e-3, 1e4, 4.8584485),
+    (1e-2, 1.0, 0.65095475),
+    (1e-2, 100.0, 2.5512603),
+    (1e-2, 1e4, 13.478322),
 ]
 
 
@@ -111,18 +174,30 @@ def line_with(a: float, tau0: float, b: float) -> tuple[Transition, float]:
     """A made-up line of 2000 Å and the log N that give damping a and central depth tau0."""
     wavelength, f = 2000.0, 0.1
     gamma = a * 4.0 * math.pi * (b * 1e3) / (wavelength * 1e-10)
-    line = Transition("X I", "2000", "X", 20.0, 1e8 / wavelength, None, f, gamma, 0.0, None,
-                      structure=(LineComponent(1e8 / wavelength, 1.0, 20.0),))
-    h0 = float(voigt(a, np.array([0.0]))[0])
-    unit = TransitionLines(line).depth(np.array([1 / wavelength]), 1.0, np.array([b]), 1.0, 0.0)[0]
-    return line, math.log10(tau0 / unit) if h0 else 0.0
+    line = Transition(
+        "X I",
+        "2000",
+        "X",
+        20.0,
+        1e8 / wavelength,
+        None,
+        f,
+        gamma,
+        0.0,
+        None,
+        structure=(LineComponent(1e8 / wavelength, 1.0, 20.0),),
+    )
+    centre = FineGrid(math.log(wavelength), 1e-6, np.array([1 / wavelength]))
+    unit = TransitionLines(line).depth(centre, 1.0, np.array([b]), 1.0, 0.0)[0]
+    return line, math.log10(tau0 / unit)
 
 
 def model_width(line: Transition, logn: float, b: float, reach: float) -> float:
     """Equivalent width over λ from the fitted model's own optical depth."""
     v = np.arange(-reach, reach, b / 60.0)
     wave = line.wavelength * np.exp(v / 299792.458)
-    tau = TransitionLines(line).depth(1 / wave, 1.0, np.array([b]), 10**logn, 0.0)
+    grid = FineGrid(math.log(wave[0]), b / 60.0 / 299792.458, 1 / wave)
+    tau = TransitionLines(line).depth(grid, 1.0, np.array([b]), 10**logn, 0.0)
     return float(np.trapezoid(-np.expm1(-tau), wave)) / line.wavelength
 
 
@@ -134,7 +209,7 @@ def model_width(line: Transition, logn: float, b: float, reach: float) -> float:
 def test_curve_of_growth(route, a, tau0, growth):
     b = 3.0
     line, logn = line_with(a, tau0, b)
-    # the damping wings fall as a τ0/u² beyond the reach: 2 a τ0/(√π u) of the half integral is added
+    # the damping wings fall as a τ0/u² beyond the reach: a τ0/(√π u) of the half is added
     reach = max(8.0, 60.0 * math.sqrt(a * tau0)) * b
     if route == "model":
         width = model_width(line, logn, b, reach)

@@ -37,6 +37,7 @@ class AtomicData:
     telluric : tuple of TelluricRange
     digests : dict
         SHA-256 of each table, by file name, for the record of a measurement.
+
     """
 
     transitions: tuple[Transition, ...]
@@ -66,6 +67,7 @@ class AtomicData:
         ------
         AtomicDataError
             No such transition; the message has the nearest names.
+
         """
         by_name: dict[str, Transition] = self._by_name  # type: ignore[attr-defined]
         key = " ".join(name.split())
@@ -99,15 +101,18 @@ class AtomicData:
         redshift : float
             Redshift of the absorber.
         min_sensitivity : float, optional
-            Least \\|velocity shift\\| per ppm of Δα/α, m/s; leaves out lines without q.
+            Least absolute velocity shift per ppm of Δα/α, m/s; leaves out lines without q.
         extra : bool
             Also search the wider line list.
+
         """
         pool = (*self.transitions, *self.extra_lines) if extra else self.transitions
-        return tuple(sorted(
-            (t for t in pool if self._matches(t, ion, wavelength, redshift, min_sensitivity)),
-            key=lambda t: t.wavelength,
-        ))
+        return tuple(
+            sorted(
+                (t for t in pool if self._matches(t, ion, wavelength, redshift, min_sensitivity)),
+                key=lambda t: t.wavelength,
+            )
+        )
 
     @staticmethod
     def _matches(
@@ -145,8 +150,9 @@ class AtomicData:
         """
         factor = 1.0 + velocity / 299_792.458
         low, high = wavelength
-        return tuple(r for r in self.telluric if r.wave_min * factor <= high
-                     and r.wave_max * factor >= low)
+        return tuple(
+            r for r in self.telluric if r.wave_min * factor <= high and r.wave_max * factor >= low
+        )
 
 
 def _transition(row: Row, structure: dict[tuple[str, str], list[LineComponent]]) -> Transition:
@@ -232,14 +238,14 @@ def load_atomic_data(structure: Structure = "isotopic", folder: Path | None = No
     ------
     AtomicDataError
         A table is missing or malformed; the message names file, line and column.
+
     """
     folder = folder or built_in_folder()
     names = ("transitions", "structure", "isotopes", "extra_lines", "telluric")
     paths = {name: folder / f"{name}.ecsv" for name in names}
     components = _structure(paths["structure"])
     transitions = tuple(
-        _transition(row, components)
-        for row in read_rows(paths["transitions"], _TRANSITION_COLUMNS)
+        _transition(row, components) for row in read_rows(paths["transitions"], _TRANSITION_COLUMNS)
     )
     if structure == "composite":
         transitions = tuple(transition.as_composite() for transition in transitions)

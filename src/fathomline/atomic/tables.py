@@ -38,6 +38,7 @@ class Row:
         Line number in the file, from 1.
     fields : mapping of str to str
         The row as read.
+
     """
 
     def __init__(self, file: str, line: int, fields: Mapping[str, str]) -> None:
@@ -86,6 +87,7 @@ def read_rows(path: Path, required: Sequence[str]) -> Iterator[Row]:
     ------
     AtomicDataError
         The file is missing, is not text, lacks a column, or a row has the wrong length.
+
     """
     try:
         lines = path.read_text(encoding="utf-8").splitlines()

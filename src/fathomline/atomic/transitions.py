@@ -46,6 +46,7 @@ class LineComponent:
         Mass of the absorbing atom, u.
     mass_number : int
         Mass number of the isotope; 0 for a composite.
+
     """
 
     wavenumber: float
@@ -78,6 +79,7 @@ class Transition:
         Whether the lower level is the ground level, so that every atom of the ion can absorb.
     sources : dict
         Where each quantity comes from, by the name of the quantity.
+
     """
 
     ion: str

@@ -41,6 +41,7 @@ class Covariance:
         Why a parameter has no error, by name.
     condition : float
         Condition number of the scaled Jacobian.
+
     """
 
     names: tuple[str, ...]

@@ -62,6 +62,7 @@ class FitSettings:
     max_iterations : int
     seed : int
         Of the restarts' random draws.
+
     """
 
     solver: str = "default"
@@ -70,8 +71,12 @@ class FitSettings:
     seed: int = 1
 
 
-def _solve(model: AbsorberModel, start: Array, settings: FitSettings,
-           report: Callable[[int, float], None] | None = None) -> Minimum:
+def _solve(
+    model: AbsorberModel,
+    start: Array,
+    settings: FitSettings,
+    report: Callable[[int, float], None] | None = None,
+) -> Minimum:
     parameters = model.parameters
     if settings.solver == "lmfit":
         return minimise_with_lmfit(model.residuals_and_jacobian, parameters, start)[0]
@@ -109,11 +114,14 @@ def fit_model(
     ------
     FitError
         Nothing is free, or the solver is unknown.
+
     """
     settings = settings or FitSettings()
     parameters = model.parameters
     if not parameters.free_names:
-        raise FitError("nothing is free in this fit: every parameter is fixed or tied to a fixed one")
+        raise FitError(
+            "nothing is free in this fit: every parameter is fixed or tied to a fixed one"
+        )
 
     def tell(stage: str) -> Callable[[int, float], None] | None:
         if progress is None:
@@ -157,14 +165,16 @@ def _restart(
             shift = float((found.x[alpha] - best.x[alpha]) / sigmas[alpha])
         change = found.chi2 - best.chi2
         returned = found.converged and abs(shift) <= _RETURN_SIGMA and abs(change) <= _RETURN_CHI2
-        records.append(Restart(
-            start_dalpha=float(start[alpha]) if alpha is not None else 0.0,
-            shift_sigma=shift,
-            chi2_change=change,
-            converged=found.converged,
-            returned=returned,
-            n_evaluations=found.n_evaluations,
-        ))
+        records.append(
+            Restart(
+                start_dalpha=float(start[alpha]) if alpha is not None else 0.0,
+                shift_sigma=shift,
+                chi2_change=change,
+                converged=found.converged,
+                returned=returned,
+                n_evaluations=found.n_evaluations,
+            )
+        )
         if change < -_RETURN_CHI2 or (found.converged and not best.converged and change <= 0.0):
             return records, found
     return records, None

@@ -40,6 +40,8 @@ EDM_TOLERANCE = 1e-8
 _RANK = 1e-10  # singular values below this share of the largest carry no information
 _FIRST_RADIUS = 100.0
 _SMALLEST_RADIUS = 1e-10
+_ROUNDING = 1e-9  # of χ²: a smaller difference is rounding of the model
+_MAX_BLIND_STEPS = 4
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,6 +63,7 @@ class Minimum:
     message : str
     n_evaluations, n_iterations : int
         An evaluation is one residual with its Jacobian.
+
     """
 
     x: Array
@@ -144,31 +147,33 @@ def minimise(
     -------
     Minimum
         `converged` is False with a message when the iteration did not reach the tolerance.
+
     """
     x = np.clip(start, lower, upper)
     residual, jacobian = function(x)
     chi2 = float(residual @ residual)
     if not math.isfinite(chi2):
         raise FloatingPointError("the residuals at the start values are not finite")
-    radius, evaluations, iterations = _FIRST_RADIUS, 1, 0
+    radius, evaluations, iterations, blind_steps = _FIRST_RADIUS, 1, 0, 0
+
+    def ended(converged: bool, message: str) -> Minimum:
+        return Minimum(
+            x, residual, jacobian, chi2, edm, held, converged, message, evaluations, iterations
+        )
+
     while True:
-        gradient = jacobian.T @ residual
-        held = _held(x, gradient, lower, upper)
+        held = _held(x, jacobian.T @ residual, lower, upper)
         step, edm = _reduced_step(residual, jacobian, held)
         if step is None or edm < edm_tolerance:
-            return Minimum(x, residual, jacobian, chi2, edm, held, True,
-                           "converged", evaluations, iterations)
+            return ended(True, "converged")
         accepted = False
         while not accepted:
-            if iterations >= max_iterations or radius < _SMALLEST_RADIUS:
-                stuck = "stopped at the largest number of iterations" \
-                    if iterations >= max_iterations else "no step decreases χ²"
-                # rounding of χ² itself: nothing below this can be seen in a decrease
-                noise = 1e-12 * max(chi2, 1.0)
-                good = edm < max(edm_tolerance, noise)
-                return Minimum(x, residual, jacobian, chi2, edm, held, good,
-                               "converged to rounding" if good else stuck,
-                               evaluations, iterations)
+            if iterations >= max_iterations:
+                return ended(False, "stopped at the largest number of iterations")
+            if radius < _SMALLEST_RADIUS or blind_steps > _MAX_BLIND_STEPS:
+                if edm < _ROUNDING * max(chi2, 1.0):
+                    return ended(True, "converged to the rounding of χ²")
+                return ended(False, "no step decreases χ²")
             iterations += 1
             trial, length = _bounded_trial(step, radius, residual, jacobian, x, held, lower, upper)
             predicted = chi2 - _square(residual + jacobian @ (trial - x))
@@ -176,6 +181,11 @@ def minimise(
             evaluations += 1
             new_chi2 = float(new_residual @ new_residual)
             ratio = (chi2 - new_chi2) / predicted if predicted > 0.0 else -1.0
+            if predicted > 0.0 and abs(chi2 - new_chi2) < _ROUNDING * chi2:
+                # too close to the minimum for χ² to tell: trust the quadratic model
+                blind_steps += 1
+                accepted = True
+                break
             if not math.isfinite(new_chi2) or ratio < 0.25:
                 radius = 0.25 * min(radius, length) if length > 0.0 else 0.25 * radius
             elif ratio > 0.75 and length > 0.8 * radius:

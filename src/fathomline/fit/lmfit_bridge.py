@@ -43,6 +43,7 @@ def to_lmfit(parameters: ParameterSet, free: Array | None = None) -> lmfit.Param
     lmfit.Parameters
         Named p0, p1, …; ``user_data`` holds the parameter's own name. Ties and fixed parameters
         stay inside the model: each tied group is one free parameter.
+
     """
     import lmfit
 
@@ -72,6 +73,7 @@ def minimise_with_lmfit(
     Returns
     -------
     Minimum, lmfit.minimizer.MinimizerResult
+
     """
     import lmfit
 

@@ -41,6 +41,7 @@ class Restart:
     returned : bool
         Whether it came back to the same answer.
     n_evaluations : int
+
     """
 
     start_dalpha: float
@@ -76,6 +77,7 @@ class FitResult:
     solver : str
     n_evaluations, n_iterations : int
         Of the main fit; restarts keep their own.
+
     """
 
     values: Mapping[str, float]

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from fathomline.atomic import AtomicData, Transition, load_atomic_data
 from fathomline.constants import C_KMS, DOPPLER_KMS2
 from fathomline.errors import AtomicDataError, JobError, SpectrumError
-from fathomline.job.number import QUANTITIES, Number, Reference, resolve
+from fathomline.job.number import QUANTITIES, Number, Reference
 from fathomline.job.schema import Component, Job, Region
 from fathomline.job.schema import Spectrum as SpectrumTable
 from fathomline.model import (
@@ -32,7 +32,7 @@ from fathomline.model import (
 from fathomline.profile import TransitionLines
 from fathomline.spectra import GaussianLineSpread, Spectrum, local_level, read_spectrum
 
-__all__ = ["ALPHA", "BuiltModel", "build_model", "load_atoms", "load_spectra"]
+__all__ = ["ALPHA", "BuiltModel", "build_model", "load_atoms", "load_spectra", "load_spectrum"]
 
 ALPHA = "alpha.dalpha"
 """Name of Δα/α (ppm) among the parameters."""
@@ -54,6 +54,7 @@ class BuiltModel:
     model : AbsorberModel
     transitions : tuple of Transition
         The transition of each region, in the order of the job.
+
     """
 
     job: Job
@@ -73,7 +74,31 @@ def _line_spread(table: SpectrumTable, job: Job, index: int) -> GaussianLineSpre
     if resolution.R is not None:
         return GaussianLineSpread.from_resolving_power(resolution.R, resolution.error)
     return GaussianLineSpread(
-        job.start_value(Reference("spectrum", index, "fwhm")), resolution.error
+        job.start_values()[Reference("spectrum", index, "fwhm")], resolution.error
+    )
+
+
+def load_spectrum(job: Job, index: int) -> Spectrum:
+    """Read spectrum `index` (from 0) of a job.
+
+    Raises
+    ------
+    SpectrumError
+        The file cannot be read.
+
+    """
+    table = job.spectra[index]
+    return read_spectrum(
+        job.spectrum_path(index),
+        columns=_columns(table),
+        unit=table.unit,
+        medium=table.medium,
+        frame=table.frame,
+        velocity=table.berv,
+        lsf=_line_spread(table, job, index),
+        name=table.id,
+        error_file=job.error_path(index),
+        continuum_file=job.continuum_path(index),
     )
 
 
@@ -84,25 +109,13 @@ def load_spectra(job: Job) -> tuple[Spectrum, ...]:
     ------
     JobError
         One message for each file that cannot be read, with the line of the job.
+
     """
     spectra: list[Spectrum] = []
     faults: list[str] = []
-    for index, table in enumerate(job.spectra):
+    for index in range(len(job.spectra)):
         try:
-            spectra.append(
-                read_spectrum(
-                    job.spectrum_path(index),
-                    columns=_columns(table),
-                    unit=table.unit,
-                    medium=table.medium,
-                    frame=table.frame,
-                    velocity=table.berv,
-                    lsf=_line_spread(table, job, index),
-                    name=table.id,
-                    error_file=job.error_path(index),
-                    continuum_file=job.continuum_path(index),
-                )
-            )
+            spectra.append(load_spectrum(job, index))
         except SpectrumError as fault:
             faults.append(f"{job.locate('spectrum', index, 'file')}: {fault}")
     if faults:
@@ -121,7 +134,7 @@ class _Builder:
 
     def __init__(self, job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> None:
         self.job, self.spectra, self.atoms = job, spectra, atoms
-        self.numbers = job.numbers()  # once: collecting them anew per line is slow
+        self.start = job.start_values()
         self.parameters: list[Parameter] = []
         self.faults: list[str] = []
         self.bounds = {s.name: s.bounds() for s in spectra}
@@ -155,9 +168,7 @@ class _Builder:
             low = bounds[0] if number.min is None else low
             high = bounds[1] if number.max is None else high
         value = 0.0 if number.value is None else number.value
-        return self.put(
-            Parameter(name, value, unit, low, high, fixed=number.fixed, prior=prior)
-        )
+        return self.put(Parameter(name, value, unit, low, high, fixed=number.fixed, prior=prior))
 
     # -- components -------------------------------------------------------------------------
 
@@ -171,15 +182,20 @@ class _Builder:
                 self.fault(
                     f"[[component]] {k + 1}: logN of {ion} is not constrained: no region has a "
                     f"transition of {ion}; add one or remove the entry",
-                    "component", k, "logN", ion,
+                    "component",
+                    k,
+                    "logN",
+                    ion,
                 )
-        velocity = self.job.start_value(Reference("component", k, "velocity"))
+        velocity = self.start[Reference("component", k, "velocity")]
         inside = any(r.window[0] <= velocity <= r.window[1] for r in mine)
         if mine and not inside:
             self.fault(
                 f"[[component]] {k + 1}: velocity {velocity:g} km/s lies outside every window of "
                 f"its ions; the widest reaches from {low:g} to {high:g} km/s",
-                "component", k, "velocity",
+                "component",
+                k,
+                "velocity",
             )
             low, high = -math.inf, math.inf
         width: dict[str, int] = {}
@@ -188,8 +204,9 @@ class _Builder:
             if value is not None:
                 width[quantity] = self.number(f"{name}.{quantity}", value, quantity)
         return ComponentTerms(
-            velocity=self.number(f"{name}.velocity", table.velocity, "velocity",
-                                 bounds=(low, high)),
+            velocity=self.number(
+                f"{name}.velocity", table.velocity, "velocity", bounds=(low, high)
+            ),
             log_columns={
                 ion: self.number(f'{name}.logN["{ion}"]', value, "logN")
                 for ion, value in table.logN.items()
@@ -208,8 +225,10 @@ class _Builder:
         if transition.q is None:
             self.fault(
                 f"[[region]] {i + 1}: {transition.name} has no sensitivity coefficient q, so it "
-                "cannot take part in a measurement of Δα/α; `fathomline lines` lists those that can",
-                "region", i, "transition",
+                "cannot take part in a measurement; `fathomline lines` lists those that can",
+                "region",
+                i,
+                "transition",
             )
             return None
         return transition
@@ -235,23 +254,35 @@ class _Builder:
             for lower, upper in region.exclude:
                 good &= ~((velocity >= lower) & (velocity <= upper))
             if not good.any():
-                reasons.append(f"{spectrum.name!r} has {last - first} pixels there, all masked "
-                               "or excluded")
+                reasons.append(
+                    f"{spectrum.name!r} has {last - first} pixels there, all masked or excluded"
+                )
                 continue
             if region.zero_level is not None and zero_level is None:
-                zero_level = self.number(f"region[{i + 1}].zero_level", region.zero_level,
-                                         "zero_level")
-            segment = self.segment(i, region, transition, spectrum, slice(first, last), good,
-                                   fwhm[spectrum.name], zero_level)
+                zero_level = self.number(
+                    f"region[{i + 1}].zero_level", region.zero_level, "zero_level"
+                )
+            segment = self.segment(
+                i,
+                region,
+                transition,
+                spectrum,
+                slice(first, last),
+                good,
+                fwhm[spectrum.name],
+                zero_level,
+            )
             if segment is not None:
                 found.append(segment)
         if not found and reasons:
             covered = any("all masked" in reason for reason in reasons)
-            problem = "has no good pixel" if covered else "is not covered"
+            problem = "has no good pixel in" if covered else "is not covered by"
             self.fault(
-                f"[[region]] {i + 1}: {transition.name} at {centre:.2f} Å {problem} by the "
+                f"[[region]] {i + 1}: {transition.name} at {centre:.2f} Å {problem} the "
                 f"{'named ' if named is not None else ''}spectra: {'; '.join(reasons)}",
-                "region", i, "transition",
+                "region",
+                i,
+                "transition",
             )
         return found
 
@@ -275,7 +306,9 @@ class _Builder:
                 f"[[region]] {i + 1} and {other + 1} share {n} pixels of spectrum "
                 f"{spectrum.name!r}, which would count twice; narrow a window, or keep one region "
                 "that holds both lines",
-                "region", i, "window",
+                "region",
+                i,
+                "window",
             )
             return None
         owner[good] = i
@@ -289,7 +322,9 @@ class _Builder:
         except SpectrumError as problem:
             self.fault(
                 f"[[region]] {i + 1}: {transition.name} in spectrum {spectrum.name!r}: {problem}",
-                "region", i, "transition",
+                "region",
+                i,
+                "transition",
             )
             return None
         with np.errstate(divide="ignore", invalid="ignore"):  # masked pixels may have no continuum
@@ -307,8 +342,11 @@ class _Builder:
             good=good,
             lines=self.lines(transition, spectrum.wavelength[cut]),
             continuum=tuple(
-                self.put(Parameter(f'region[{i + 1}].continuum["{spectrum.name}"][{n}]',
-                                   1.0 if n == 0 else 0.0))
+                self.put(
+                    Parameter(
+                        f'region[{i + 1}].continuum["{spectrum.name}"][{n}]', 1.0 if n == 0 else 0.0
+                    )
+                )
                 for n in range(region.continuum + 1)
             ),
             zero_level=zero_level,
@@ -331,20 +369,25 @@ class _Builder:
                 terms = TransitionLines(line)
                 centre = line.observed_wavelength(z)
                 for k, component in components:
-                    if ion in component.logN and self._reaches(k, component, ion, line.mass, terms,
-                                                               centre, wavelength):
+                    if ion in component.logN and self._reaches(
+                        k, component, ion, line.mass, terms, centre, wavelength
+                    ):
                         out[line.name] = (ion, terms)
                         break
         return tuple(out.values())
 
     def _reaches(
-        self, k: int, component: Component, ion: str, mass: float, terms: TransitionLines,
-        centre: float, wavelength: NDArray[np.float64],
+        self,
+        k: int,
+        component: Component,
+        ion: str,
+        mass: float,
+        terms: TransitionLines,
+        centre: float,
+        wavelength: NDArray[np.float64],
     ) -> bool:
         def value(quantity: str, ion: str | None = None) -> float:
-            start = resolve(self.numbers, Reference("component", k, quantity, ion))
-            assert start is not None  # a checked job has no tie without an end
-            return start
+            return self.start[Reference("component", k, quantity, ion)]
 
         if component.b is not None:
             b = value("b")
@@ -369,6 +412,7 @@ def build_model(job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> Bui
         All faults at once, each with the line of the job: a transition that is unknown, without q
         or not covered, a region without a good pixel, regions that share pixels, a component
         outside every window, a column density that nothing constrains.
+
     """
     builder = _Builder(job, spectra, atoms)
     alpha = builder.number(ALPHA, job.alpha.dalpha, "dalpha")

@@ -5,7 +5,7 @@ from __future__ import annotations
 import platform
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime
 from importlib import metadata
 from typing import Any
@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 import fathomline
-from fathomline.fit import FLAGS, FitResult, FitSettings, fit_model
+from fathomline.fit import CAUTIONS, FLAGS, FitResult, FitSettings, fit_model
 from fathomline.job.building import ALPHA, BuiltModel, build_model, load_atoms, load_spectra
 from fathomline.job.digest import job_digest
 from fathomline.job.schema import Job
@@ -47,6 +47,7 @@ class RegionShare:
         projection on what no other parameter can imitate. The shares sum to 1.
     chi2 : float
         χ² of its pixels.
+
     """
 
     transition: str
@@ -77,6 +78,7 @@ class Measurement:
         Seconds by stage.
     started : datetime
     warnings : list of str
+
     """
 
     built: BuiltModel
@@ -109,6 +111,27 @@ class Measurement:
         """All flags of the row in the measurement table."""
         return (*self.fit.flags, STAT_ONLY)
 
+    def flag_meanings(self) -> dict[str, str]:
+        """The flags of this measurement and what they mean."""
+        meanings = {**FLAGS, **CAUTIONS, STAT_ONLY: "no systematic error budget was made"}
+        return {flag: meanings[flag] for flag in self.flags}
+
+    def error(self, name: str) -> float | str:
+        """1σ error of a parameter, or the reason why it has none.
+
+        The reason is ``fixed``, ``at bound`` or ``singular``. The error of a tied parameter is that
+        of its target times the ratio.
+        """
+        parameters = self.built.model.parameters
+        i = parameters.position(name)
+        if parameters.ratio[i] == 0.0:
+            return "fixed"
+        root = parameters.free_names[parameters.index[i]]
+        sigma = self.fit.covariance.sigma(root)
+        if sigma is None:
+            return self.fit.covariance.reasons[root]
+        return abs(float(parameters.ratio[i])) * sigma
+
     @property
     def trustworthy(self) -> bool:
         """Whether no flag says that the result should not be trusted."""
@@ -117,8 +140,10 @@ class Measurement:
     def versions(self) -> dict[str, str]:
         """Versions of this program, of Python and of the numerical packages."""
         packages = ("numpy", "scipy", "astropy", "lmfit", "matplotlib", "pydantic")
-        found: dict[str, str] = {"fathomline": fathomline.__version__,
-                                 "python": platform.python_version()}
+        found: dict[str, str] = {
+            "fathomline": fathomline.__version__,
+            "python": platform.python_version(),
+        }
         for package in packages:
             found[package] = metadata.version(package)
         return found
@@ -132,8 +157,10 @@ class Measurement:
             "started": self.started.isoformat(timespec="seconds"),
             "versions": self.versions(),
             "inputs": [s.reading.to_dict() for s in self.built.spectra],
-            "atomic_data": {"structure": self.job.atomic.structure,
-                            "tables": self.built.atoms.digests},
+            "atomic_data": {
+                "structure": self.job.atomic.structure,
+                "tables": self.built.atoms.digests,
+            },
             "fit": {
                 "solver": self.fit.solver,
                 "seed": self.job.fit.seed,
@@ -143,8 +170,12 @@ class Measurement:
                 "n_iterations": self.fit.n_iterations,
                 "n_evaluations": self.fit.n_evaluations,
                 "restarts": [
-                    {"start_dalpha_ppm": r.start_dalpha, "shift_sigma": r.shift_sigma,
-                     "chi2_change": r.chi2_change, "returned": r.returned}
+                    {
+                        "start_dalpha_ppm": r.start_dalpha,
+                        "shift_sigma": r.shift_sigma,
+                        "chi2_change": r.chi2_change,
+                        "returned": r.returned,
+                    }
                     for r in self.fit.restarts
                 ],
                 "errors_withheld": self.fit.covariance.reasons,
@@ -155,8 +186,9 @@ class Measurement:
         }
 
 
-def _shares(built: BuiltModel, fit: FitResult, predictions: list[SegmentPrediction]
-            ) -> list[RegionShare]:
+def _shares(
+    built: BuiltModel, fit: FitResult, predictions: list[SegmentPrediction]
+) -> list[RegionShare]:
     model = built.model
     residual, jacobian = model.residuals_and_jacobian(fit.free)
     projected = _alpha_alone(model.parameters.free_names, jacobian)
@@ -165,19 +197,23 @@ def _shares(built: BuiltModel, fit: FitResult, predictions: list[SegmentPredicti
     for i, transition in enumerate(built.transitions):
         own = [k for k, segment in enumerate(model.segments) if segment.region == i]
         rows = np.concatenate([np.arange(model.rows[k], model.rows[k + 1]) for k in own])
-        snr = np.concatenate([
-            predictions[k].continuum[model.segments[k].good]
-            / model.segments[k].error[model.segments[k].good]
-            for k in own
-        ])
+        snr = np.concatenate(
+            [
+                predictions[k].continuum[model.segments[k].good]
+                / model.segments[k].error[model.segments[k].good]
+                for k in own
+            ]
+        )
         part = float(projected[rows] @ projected[rows])
-        shares.append(RegionShare(
-            transition=transition.name,
-            n_pixels=rows.size,
-            snr=float(np.median(snr)),
-            information=part / total if total > 0.0 else 0.0,
-            chi2=float(residual[rows] @ residual[rows]),
-        ))
+        shares.append(
+            RegionShare(
+                transition=transition.name,
+                n_pixels=rows.size,
+                snr=float(np.median(snr)),
+                information=part / total if total > 0.0 else 0.0,
+                chi2=float(residual[rows] @ residual[rows]),
+            )
+        )
     return shares
 
 
@@ -211,7 +247,9 @@ def measure(job: Job, *, progress: Progress | None = None) -> Measurement:
     ------
     JobError
         The job does not fit its spectra; all faults at once.
+
     """
+
     def tell(text: str, chi2: float | None = None) -> None:
         if progress is not None:
             progress(text, chi2)
@@ -244,8 +282,9 @@ def measure(job: Job, *, progress: Progress | None = None) -> Measurement:
     warnings = [
         f"{spectrum.name}: {text}" for spectrum in spectra for text in spectrum.reading.warnings
     ]
-    return Measurement(built, fit, predictions, shares, resamplings, job_digest(job), timings,
-                       started, warnings)
+    return Measurement(
+        built, fit, predictions, shares, resamplings, job_digest(job), timings, started, warnings
+    )
 
 
 def _fit_with_fine_enough_grid(
@@ -254,15 +293,23 @@ def _fit_with_fine_enough_grid(
     # restarts are for the final model: a first fit without them finds out how fine the grid must be
     model = built.model
     start: Array = model.parameters.start
-    for resamplings in range(_MAX_RESAMPLINGS):
-        first = fit_model(model, _without_restarts(settings), start=start, progress=tell)
+    resamplings = iterations = evaluations = 0
+    while True:
+        first = fit_model(model, replace(settings, restarts=0), start=start, progress=tell)
+        iterations += first.n_iterations
+        evaluations += first.n_evaluations
         finer = model.resampled(first.free, refine=1.0)
-        if finer is None:
+        if finer is None or resamplings == _MAX_RESAMPLINGS:
             break
-        model, start = finer, first.free
+        model, start, resamplings = finer, first.free, resamplings + 1
     fit = fit_model(model, settings, start=first.free, progress=tell)
-    return BuiltModel(built.job, built.spectra, built.atoms, model, built.transitions), fit, resamplings
-
-
-def _without_restarts(settings: FitSettings) -> FitSettings:
-    return FitSettings(settings.solver, 0, settings.max_iterations, settings.seed)
+    fit = replace(
+        fit,
+        n_iterations=fit.n_iterations + iterations,
+        n_evaluations=fit.n_evaluations + evaluations,
+    )
+    return (
+        BuiltModel(built.job, built.spectra, built.atoms, model, built.transitions),
+        fit,
+        resamplings,
+    )

@@ -37,7 +37,15 @@ from pydantic import AfterValidator
 from fathomline.job.table import Fault, Flag, Real, Table, Text, describe, fault, plain
 from fathomline.job.toml_source import KeyPath
 
-__all__ = ["QUANTITIES", "Number", "Quantity", "Reference", "checked_as", "resolve", "tie_faults"]
+__all__ = [
+    "QUANTITIES",
+    "Number",
+    "Quantity",
+    "Reference",
+    "checked_as",
+    "start_values",
+    "tie_faults",
+]
 
 
 class Quantity(NamedTuple):
@@ -323,10 +331,9 @@ def _circles(numbers: Mapping[Reference, Number]) -> Iterator[Fault]:
 
 
 def _meaningless_ties(numbers: Mapping[Reference, Number]) -> Iterator[Fault]:
-    for reference, number in numbers.items():
-        if number.same_as is None:
+    for reference, value in start_values(numbers).items():
+        if numbers[reference].same_as is None:
             continue
-        value = resolve(numbers, reference)
         kind = QUANTITIES[reference.quantity]
         if value is not None and not (math.isfinite(value) and kind.is_meaningful(value)):
             relation = "at least" if kind.least_included else "above"
@@ -337,23 +344,25 @@ def _meaningless_ties(numbers: Mapping[Reference, Number]) -> Iterator[Fault]:
             )
 
 
-def resolve(numbers: Mapping[Reference, Number], reference: Reference) -> float | None:
-    """The start value of a number with its ties followed; None if they lead nowhere.
+def start_values(numbers: Mapping[Reference, Number]) -> dict[Reference, float | None]:
+    """The start value of each number with its ties followed; None where they lead nowhere.
 
-    The unit is that of the number's quantity.
+    The units are those of the quantities.
     """
-    steps: list[tuple[float, float]] = []
-    seen: set[Reference] = set()
-    current = reference
-    while current in numbers and current not in seen:
-        seen.add(current)
-        number = numbers[current]
-        target = number.target
-        if target is None:
-            value = number.value
-            for ratio, offset in reversed(steps):
-                value = None if value is None else ratio * value + offset
-            return value
-        steps.append((number.ratio, number.offset))
-        current = target
-    return None
+    values: dict[Reference, float | None] = {}
+    for start in numbers:
+        chain: dict[Reference, None] = {}
+        current = start
+        while current in numbers and current not in values and current not in chain:
+            target = numbers[current].target
+            if target is None:
+                values[current] = numbers[current].value
+                break
+            chain[current] = None
+            current = target
+        value = values.get(current)
+        for member in reversed(chain):
+            number = numbers[member]
+            value = None if value is None else number.ratio * value + number.offset
+            values[member] = value
+    return values

@@ -15,7 +15,13 @@ from pydantic import ValidationError
 
 from fathomline.errors import JobError
 from fathomline.job.paths import absolute_path
-from fathomline.job.schema import SUPPORTED_SCHEMAS, Job, attach, unsupported_schema
+from fathomline.job.schema import (
+    MAXIMUM_ENTRIES,
+    SUPPORTED_SCHEMAS,
+    Job,
+    attach,
+    unsupported_schema,
+)
 from fathomline.job.table import Fault, faults_of
 from fathomline.job.toml_source import KeyPath, TomlSource, parse_toml
 
@@ -28,6 +34,7 @@ MAXIMUM_BYTES = 5_000_000
 MAXIMUM_FAULTS = 100
 
 _ARRAYS = ("spectrum", "region", "component", "distortion", "blend")
+_TABLES = ("absorber", "atomic", "alpha", "fit", "structure", "budget")
 _FILE_KEYS = ("file", "error_file", "continuum_file")
 
 
@@ -144,7 +151,9 @@ def _checked(data: Mapping[str, Any], source: TomlSource, check_files: bool) -> 
 def _file_faults(data: Mapping[str, Any], folder: Path) -> Iterator[Fault]:
     """Data files that do not exist; looks at raw data, so that other faults do not hide these."""
     entries = data.get("spectrum")
-    for index, entry in enumerate(entries if isinstance(entries, list) else []):
+    if not isinstance(entries, list) or len(entries) > MAXIMUM_ENTRIES:
+        return
+    for index, entry in enumerate(entries):
         for key in _FILE_KEYS if isinstance(entry, Mapping) else ():
             text = entry.get(key)
             if not isinstance(text, str) or not text.strip():
@@ -195,18 +204,18 @@ def _subject(path: KeyPath) -> str:
         if rest and isinstance(rest[0], int):
             table += f" {rest[0] + 1}"
             del rest[0]
-    elif len(path) == 1 and section not in ("absorber", "atomic", "alpha", "fit"):
+    elif len(path) == 1 and section not in _TABLES:
         return _shown(section)
     else:
         table = f"[{section}]"
     words = ""
-    for part in rest:
+    for previous, part in zip([None, *rest], rest, strict=False):
         if isinstance(part, int):
             words += f"[{part + 1}]"
-        elif part.replace("_", "").isalnum():
-            words += f".{part}" if words else part
+        elif previous == "logN":
+            words += f'["{part}"]'  # as references write ions
         else:
-            words += f'["{part}"]'
+            words += f".{part}" if words else part
     return f"{table} {_shown(words)}" if words else table
 
 

@@ -17,14 +17,16 @@ from typing import Annotated, Any, ClassVar, Literal, TypeVar
 
 from pydantic import AfterValidator, BeforeValidator, Field, PrivateAttr, ValidationError
 
+from fathomline.constants import C_KMS
 from fathomline.errors import JobError
-from fathomline.job.number import Number, Reference, checked_as, resolve, tie_faults
+from fathomline.job.number import Number, Reference, checked_as, start_values, tie_faults
 from fathomline.job.paths import absolute_path
 from fathomline.job.table import Fault, Flag, Real, Table, Text, Whole, choice, describe, fault
 from fathomline.job.table import plain as plain_number
 from fathomline.job.toml_source import TomlSource
 
 __all__ = [
+    "MAXIMUM_ENTRIES",
     "SUPPORTED_SCHEMAS",
     "Absorber",
     "Alpha",
@@ -46,8 +48,10 @@ SUPPORTED_SCHEMAS = (1,)
 #: Highest continuum polynomial; above it a continuum can fill in absorption lines.
 MAXIMUM_CONTINUUM_ORDER = 20
 
+#: More spectra, regions or components than this are a mistake, not a job.
+MAXIMUM_ENTRIES = 2000
+
 _NOT_YET = "not available in this version"
-_SPEED_OF_LIGHT = 299792.458  # km/s; only to refuse windows without a meaning
 _IDENTIFIER = re.compile(r"[A-Za-z0-9_.-]+")
 _ION = r"[A-Z][a-z]? [IVX]+"
 _ION_NAME = re.compile(_ION)
@@ -98,7 +102,7 @@ def _ordered(value: tuple[float, float]) -> tuple[float, float]:
             f"lower edge {plain_number(lower)} must be below upper edge {plain_number(upper)}; "
             "write [lower, upper] in km/s"
         )
-    if max(abs(lower), abs(upper)) >= _SPEED_OF_LIGHT:
+    if max(abs(lower), abs(upper)) >= C_KMS:
         raise fault("an edge is beyond the speed of light; write [lower, upper] in km/s")
     return value
 
@@ -118,12 +122,22 @@ def _array_of(expected: str) -> BeforeValidator:
     return BeforeValidator(check)
 
 
+def _column_densities(value: object) -> object:
+    if not isinstance(value, Mapping):
+        raise fault(
+            f'expected a table of ions such as {{ "Fe II" = 12.9 }}, found {describe(value)}'
+        )
+    return value
+
+
 def _entries_of(section: str) -> BeforeValidator:
     def check(value: object) -> object:
         if isinstance(value, Mapping):
             raise fault(f"expected an array of tables; write [[{section}]] with two brackets")
         if not isinstance(value, list | tuple):
             raise fault(f"expected an array of tables [[{section}]], found {describe(value)}")
+        if len(value) > MAXIMUM_ENTRIES:
+            raise fault(f"{len(value)} entries; a job has at most {MAXIMUM_ENTRIES}")
         return tuple(value)
 
     return BeforeValidator(check)
@@ -319,7 +333,9 @@ class Component(Table):
     b: Annotated[Number, checked_as("b")] | None = None
     temperature: Annotated[Number, checked_as("temperature")] | None = None
     b_turb: Annotated[Number, checked_as("b_turb")] | None = None
-    logN: dict[Ion, Annotated[Number, checked_as("logN")]]  # noqa: N815 (the key of the job file)
+    logN: Annotated[  # noqa: N815 (the key of the job file)
+        dict[Ion, Annotated[Number, checked_as("logN")]], BeforeValidator(_column_densities)
+    ]
 
     @classmethod
     def key_faults(cls, data: Mapping[str, Any]) -> Iterator[Fault]:
@@ -405,19 +421,10 @@ class Job(Table):
         """All numbers of the model by reference: alpha, spectra, regions, components in order."""
         return _numbers(self.alpha, self.spectra, self.regions, self.components)
 
-    def start_value(self, reference: Reference) -> float:
-        """The start value of a number, ties followed, in the unit of its quantity.
-
-        Raises
-        ------
-        KeyError
-            The job has no such number.
-
-        """
-        value = resolve(self.numbers(), reference)
-        if value is None:
-            raise KeyError(str(reference))
-        return value
+    def start_values(self) -> dict[Reference, float]:
+        """The start value of each of the `numbers`, ties followed, in the units of the keys."""
+        values = start_values(self.numbers())
+        return {reference: value for reference, value in values.items() if value is not None}
 
     def locate(self, *path: str | int) -> str:
         """Where a key was written, such as ``"halden.toml:23"``.
@@ -484,7 +491,9 @@ def _built(model: type[_Model], data: object) -> _Model | None:
 
 
 def _built_entries(model: type[_Model], data: object) -> list[_Model | None]:
-    return [_built(model, entry) for entry in data] if isinstance(data, list | tuple) else []
+    if not isinstance(data, list | tuple) or len(data) > MAXIMUM_ENTRIES:
+        return []
+    return [_built(model, entry) for entry in data]
 
 
 def _numbers(

@@ -8,19 +8,23 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fathomline.atomic import AtomicData, Transition
 from fathomline.constants import C_KMS
-from fathomline.errors import JobError
+from fathomline.errors import JobError, ResultError
+from fathomline.job.building import load_atoms, load_spectrum
 from fathomline.job.number import Reference
 from fathomline.job.schema import Component, Job
+from fathomline.job.schema import Spectrum as SpectrumTable
 from fathomline.job.synthesis import Cloud, synthetic_transmission
-from fathomline.spectra import Spectrum
+from fathomline.job.writing import write_job
+from fathomline.spectra import Spectrum, write_spectrum
 
-__all__ = ["Noise", "clouds_of", "simulate", "synthetic_grid"]
+__all__ = ["Noise", "clouds_of", "simulate", "simulate_to_folder", "synthetic_grid"]
 
 Array = NDArray[np.float64]
 
@@ -37,6 +41,7 @@ class Noise:
         Signal-to-noise ratio per pixel in the continuum; `math.inf` for none (then the error
         column is that of a ratio of 1e4).
     seed : int
+
     """
 
     snr: float = 100.0
@@ -45,9 +50,10 @@ class Noise:
 
 def clouds_of(job: Job) -> list[Cloud]:
     """The components of a job at their start values."""
+    start = job.start_values()
 
     def value(k: int, quantity: str, ion: str | None = None) -> float:
-        return job.start_value(Reference("component", k, quantity, ion))
+        return start[Reference("component", k, quantity, ion)]
 
     def cloud(k: int, component: Component) -> Cloud:
         width = "b" if component.b is not None else "b_turb"
@@ -68,6 +74,7 @@ def synthetic_grid(job: Job, atoms: AtomicData, spectrum: str, pixel: float) -> 
     ------
     JobError
         No region draws on the spectrum.
+
     """
     z = job.absorber.redshift
     limits = [
@@ -96,13 +103,21 @@ def _blocks(centres: Sequence[float], half_width: float) -> list[tuple[float, fl
     return [(low, high) for low, high in merged]
 
 
-def _transmission(job: Job, atoms: AtomicData, edges: Array, fwhm: float, dalpha: float) -> Array:
-    z = job.absorber.redshift
-    clouds = clouds_of(job)
+def _transmission(
+    redshift: float,
+    clouds: Sequence[Cloud],
+    atoms: AtomicData,
+    edges: Array,
+    fwhm: float,
+    dalpha: float,
+) -> Array:
+    z = redshift
     ions = {ion for cloud in clouds for ion in cloud.log_columns}
     lines: list[Transition] = [
-        t for ion in ions for t in atoms.find(ion=ion, extra=True) if t.ground
-        and edges[0] < t.observed_wavelength(z) < edges[-1]
+        t
+        for ion in ions
+        for t in atoms.find(ion=ion, extra=True)
+        if t.ground and edges[0] < t.observed_wavelength(z) < edges[-1]
     ]
     fastest = max(abs(cloud.velocity) for cloud in clouds)
     out = np.ones(edges.size - 1)
@@ -123,6 +138,7 @@ def simulate(
     noise: Noise,
     *,
     dalpha_ppm: float | None = None,
+    clouds: Sequence[Cloud] | None = None,
 ) -> tuple[Spectrum, ...]:
     """Synthetic spectra of a job's model.
 
@@ -136,13 +152,18 @@ def simulate(
     noise : Noise
     dalpha_ppm : float, optional
         Δα/α; default: the start value of the job.
+    clouds : sequence of Cloud, optional
+        Absorbing clouds instead of the job's components.
 
     Returns
     -------
     tuple of Spectrum
         Flux 1 in the continuum, continuum column included.
+
     """
-    alpha = job.start_value(Reference("alpha", 0, "dalpha")) if dalpha_ppm is None else dalpha_ppm
+    start = job.start_values()
+    alpha = start[Reference("alpha", 0, "dalpha")] if dalpha_ppm is None else dalpha_ppm
+    clouds = clouds_of(job) if clouds is None else clouds
     children = np.random.SeedSequence(noise.seed).spawn(len(job.spectra))
     spectra = []
     for i, (table, pixels) in enumerate(zip(job.spectra, edges, strict=True)):
@@ -150,8 +171,8 @@ def simulate(
         if resolution.R is not None:
             fwhm = C_KMS / resolution.R
         else:
-            fwhm = job.start_value(Reference("spectrum", i, "fwhm"))
-        flux = _transmission(job, atoms, pixels, fwhm, alpha)
+            fwhm = start[Reference("spectrum", i, "fwhm")]
+        flux = _transmission(job.absorber.redshift, clouds, atoms, pixels, fwhm, alpha)
         sigma = np.full(flux.size, 1e-4 if math.isinf(noise.snr) else 1.0 / noise.snr)
         if not math.isinf(noise.snr):
             flux = flux + sigma * np.random.default_rng(children[i]).standard_normal(flux.size)
@@ -162,3 +183,61 @@ def simulate(
         )
     return tuple(spectra)
 
+
+def simulate_to_folder(
+    job: Job,
+    job_name: str,
+    folder: Path,
+    noise: Noise,
+    *,
+    pixel: float,
+    dalpha_ppm: float | None = None,
+) -> list[Path]:
+    """Write synthetic spectra and a job that fits them; return the files.
+
+    Parameters
+    ----------
+    job : Job
+    job_name : str
+        File name of the job to write.
+    folder : Path
+        Made if needed; files in it are never overwritten.
+    noise : Noise
+    pixel : float
+        Pixel size, km/s, for spectra whose file does not exist.
+    dalpha_ppm : float, optional
+        Δα/α; default: the start value of the job.
+
+    Raises
+    ------
+    ResultError
+        A file is already there, or the folder cannot be written.
+
+    """
+    atoms = load_atoms(job)
+    files = [folder / f"{table.id}.fits" for table in job.spectra]
+    job_path = folder / job_name
+    for path in (*files, job_path):
+        if path.exists():
+            raise ResultError(
+                f"{path}: is already there and is not overwritten; use another folder"
+            )
+    edges = [
+        load_spectrum(job, i).edges
+        if job.spectrum_path(i).exists()
+        else synthetic_grid(job, atoms, table.id, pixel)
+        for i, table in enumerate(job.spectra)
+    ]
+    spectra = simulate(job, atoms, edges, noise, dalpha_ppm=dalpha_ppm)
+    tables = tuple(
+        SpectrumTable(id=table.id, file=f"{table.id}.fits", resolution=table.resolution)
+        for table in job.spectra
+    )
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        for path, spectrum in zip(files, spectra, strict=True):
+            write_spectrum(spectrum, path, comment="simulated by fathomline")
+        write_job(job.model_copy(update={"spectra": tables}), job_path)
+    except OSError as error:
+        raise ResultError(f"{folder}: cannot be written: {error.strerror or error}") from error
+    return [*files, job_path]

@@ -1,7 +1,7 @@
 """Synthetic absorption by a route of its own, to test the fitted model against.
 
-Nothing here is shared with `fathomline.model` or `fathomline.profile`: the optical depth is formed in
-frequency from SI constants and scipy's Faddeeva function on a grid much finer than any line,
+Nothing here is shared with `fathomline.model` or `fathomline.profile`: the optical depth is formed
+in frequency from SI constants and scipy's Faddeeva function on a grid much finer than any line,
 smoothed by a sampled Gaussian with the fast Fourier transform, and integrated over pixels in
 wavelength through the antiderivative of a cubic spline. The atomic data are shared, of course.
 """
@@ -43,6 +43,7 @@ class Cloud:
         Turbulent Doppler parameter, km/s.
     temperature : float
         Kinetic temperature, K.
+
     """
 
     velocity: float
@@ -124,6 +125,7 @@ def synthetic_transmission(
     Returns
     -------
     array (n,)
+
     """
     sigma = fwhm / math.sqrt(8.0 * math.log(2.0))
     step = min(sigma, _narrowest(transitions, clouds)) / _POINTS_PER_WIDTH

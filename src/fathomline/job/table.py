@@ -95,8 +95,11 @@ def faults_of(error: ValidationError) -> list[Fault]:
     """The faults that a failed validation found."""
     found = []
     for detail in error.errors(include_url=False, include_context=False, include_input=False):
+        path = detail["loc"]
+        if path and path[-1] == "[key]":
+            path = path[:-1]  # pydantic's mark for the key, not the value, of a mapping
         missing = detail["type"] == "missing"
-        found.append(Fault(detail["loc"], "missing" if missing else detail["msg"]))
+        found.append(Fault(path, "missing" if missing else detail["msg"]))
     return found
 
 
@@ -224,16 +227,19 @@ class Table(BaseModel):
         return f"expected a table, found {describe(data)}"
 
     @classmethod
-    def _unknown_keys(cls, data: Mapping[str, Any]) -> Iterator[Fault]:
+    def _unknown_keys(cls, data: Mapping[Any, Any]) -> Iterator[Fault]:
         keys = cls.keys()
         unknown = [key for key in data if key not in keys]
         for key in unknown[:_UNKNOWN_KEYS_SHOWN]:
+            if not isinstance(key, str):
+                yield Fault((), f"expected text as a key, found {describe(key)}")
+                continue
             if key in cls.later_keys:
                 yield Fault((key,), "not available in this version")
                 continue
             # A key may be of any length; the distance to a valid one does not need all of it.
             shown = key if len(key) <= 40 else key[:37] + "..."
-            near = difflib.get_close_matches(shown.lower(), [k.lower() for k in keys], n=1)
+            near = difflib.get_close_matches(shown.lower(), [k.lower() for k in keys], 1, 0.5)
             if near:
                 nearest = next(k for k in keys if k.lower() == near[0])
                 cure = f"did you mean {nearest!r}?"
@@ -242,4 +248,6 @@ class Table(BaseModel):
             yield Fault((key,), f"unknown key {shown!r}; {cure}")
         if len(unknown) > _UNKNOWN_KEYS_SHOWN:
             rest = len(unknown) - _UNKNOWN_KEYS_SHOWN
-            yield Fault((unknown[_UNKNOWN_KEYS_SHOWN],), f"{rest} more unknown keys from here on")
+            yield Fault(
+                (str(unknown[_UNKNOWN_KEYS_SHOWN]),), f"{rest} more unknown keys from here on"
+            )

@@ -99,23 +99,25 @@ def parse_toml(
         The text is not TOML, has a key twice, or is nested deeper than `MAXIMUM_DEPTH`.
 
     """
-    too_deep = f"nested deeper than {MAXIMUM_DEPTH} levels; a job needs no more than six"
+    # The scan comes first: it stops at a depth that would exhaust the parser's stack or memory.
+    scanner = _Scanner(text)
+    try:
+        with contextlib.suppress(_UnreadableError):
+            scanner.scan()
+    except _TooDeepError as error:
+        raise JobError(
+            f"{name}:{error.line}: nested deeper than {MAXIMUM_DEPTH} levels; a job needs six"
+        ) from None
     try:
         data = tomllib.loads(text)
-    except RecursionError:
-        raise JobError(f"{name}:{_first_deep_line(text)}: {too_deep}") from None
     except tomllib.TOMLDecodeError as error:
-        raise JobError(_syntax_fault(text, name, str(error))) from None
+        raise JobError(_syntax_fault(scanner, name, str(error))) from None
     except ValueError:
         # The standard library refuses to convert integers of thousands of digits.
         match = _LONG_INTEGER.search(text)
         line = 1 if match is None else text.count("\n", 0, match.start()) + 1
         raise JobError(f"{name}:{line}: a number has too many digits") from None
-    try:
-        lines = locate_keys(text)
-    except _TooDeepError as error:
-        raise JobError(f"{name}:{error.line}: {too_deep}") from None
-    return data, TomlSource(name, lines, Path.cwd() if folder is None else folder)
+    return data, TomlSource(name, scanner.lines, Path.cwd() if folder is None else folder)
 
 
 def locate_keys(text: str) -> dict[KeyPath, int]:
@@ -129,16 +131,12 @@ def locate_keys(text: str) -> dict[KeyPath, int]:
     return scanner.lines
 
 
-def _syntax_fault(text: str, name: str, message: str) -> str:
+def _syntax_fault(scanner: _Scanner, name: str, message: str) -> str:
     """One line for a document that the parser refused."""
-    scanner = _Scanner(text)
-    # What was scanned before the fault is enough to look for repeated keys.
-    with contextlib.suppress(_UnreadableError, _TooDeepError):
-        scanner.scan()
     place = _ERROR_PLACE.search(message)
     what = message if place is None else message[: place.start()]
     if place is None or place[1] is None:
-        line, column = text.rstrip("\n").count("\n") + 1, ""
+        line, column = scanner.text.rstrip("\n").count("\n") + 1, ""
     else:
         line, column = int(place[1]), f" (column {place[2]})"
     # A repeated key is named with both its lines; the parser only says where the second one ends.
@@ -146,17 +144,6 @@ def _syntax_fault(text: str, name: str, message: str) -> str:
         written, first, second = scanner.repeated[0]
         return f"{name}:{second}: {written} is given twice; the first is in line {first}"
     return f"{name}:{line}: not valid TOML: {what}{column}"
-
-
-def _first_deep_line(text: str) -> int:
-    """Line at which a document, too deep for the parser, passes the depth limit."""
-    try:
-        locate_keys(text)
-    except _TooDeepError as error:
-        return error.line
-    except _UnreadableError:
-        pass
-    return 1
 
 
 class _UnreadableError(Exception):
@@ -228,6 +215,8 @@ class _Scanner:
         """The parts of a dotted key, with the space around them."""
         parts: list[str] = []
         while True:
+            if len(parts) > MAXIMUM_DEPTH:
+                raise _TooDeepError(self._line())
             self._skip(_SPACE)
             quoted = self._string()
             if quoted is None:
@@ -265,7 +254,7 @@ class _Scanner:
             self._entries[path] = index + 1
             path = (*path, index)
         elif path in self._headers:
-            header = "[" + ".".join(parts) + "]"
+            header = repr("[" + ".".join(parts) + "]")[1:-1]  # one line in any case
             self.repeated.append((f"table {header}", self._headers[path], line))
         else:
             self._headers[path] = line

@@ -16,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.polynomial import legendre
@@ -31,7 +32,7 @@ from fathomline.model.instrument import (
     log_velocity,
 )
 from fathomline.model.parameters import ParameterSet
-from fathomline.profile import TransitionLines
+from fathomline.profile import FineGrid, TransitionLines
 
 __all__ = ["AbsorberModel", "ComponentTerms", "SegmentPrediction", "SegmentTerms"]
 
@@ -64,7 +65,22 @@ class ComponentTerms:
         square = DOPPLER_KMS2 * theta[self.temperature] / masses
         if self.b_turb is not None:
             square = square + theta[self.b_turb] ** 2
-        return np.sqrt(square)
+        widths: Array = np.sqrt(square)
+        return widths
+
+    @property
+    def width_parameters(self) -> tuple[int, ...]:
+        """Places of the parameters of the width."""
+        return tuple(p for p in (self.b, self.temperature, self.b_turb) if p is not None)
+
+    def width_slopes(self, theta: Array, masses: Array, b: Array) -> Array:
+        """Derivatives of `b` to the parameters of the width (n_width_parameters, n_lines)."""
+        if self.b is not None:
+            return np.ones((1, b.size))
+        thermal = 0.5 * DOPPLER_KMS2 / (masses * b)
+        if self.b_turb is None:
+            return thermal[None, :]
+        return np.array([thermal, theta[self.b_turb] / b])
 
 
 @dataclass(frozen=True)
@@ -97,6 +113,7 @@ class SegmentTerms:
         Limits of the region in km/s, for plots.
     rest : float
         Composite rest wavelength of the region's transition, Å.
+
     """
 
     region: int
@@ -127,6 +144,7 @@ class SegmentPrediction:
         is not fitted.
     components : array (n_components, n)
         Transmission of each component alone, e^{−τ_k} after the instrument.
+
     """
 
     flux: Array
@@ -139,8 +157,8 @@ class SegmentPrediction:
 class _Workspace:
     """What a segment keeps between evaluations."""
 
-    g: Array  # 1/λ on the fine grid
-    grid: Array
+    fine: FineGrid
+    grid: Array  # the same in km/s about the first pixel
     operator: InstrumentOperator
     basis: Array  # Legendre polynomials at the good pixels, (n_good, order + 1)
     inverse_error: Array
@@ -148,7 +166,7 @@ class _Workspace:
     free: NDArray[np.intp]  # free parameters that the segment depends on
     row: dict[int, int] = field(default_factory=dict)  # full position -> row among `free`
     sigma: float = math.nan
-    matrix: object = None
+    matrix: Any = None  # scipy sparse array
 
 
 class AbsorberModel:
@@ -170,6 +188,7 @@ class AbsorberModel:
     ------
     FitError
         A segment has no pixel to fit.
+
     """
 
     def __init__(
@@ -219,9 +238,7 @@ class AbsorberModel:
                         continue
                     b = component.widths(theta, lines.masses)
                     column = 10.0 ** theta[component.log_columns[ion]]
-                    needed.append(
-                        fine_spacing(float(b.min()), sigma, lines.peak_depth(b, column))
-                    )
+                    needed.append(fine_spacing(float(b.min()), sigma, lines.peak_depth(b, column)))
             spacings.append(min(needed) / self.refine)
         return spacings
 
@@ -243,19 +260,21 @@ class AbsorberModel:
         if segment.zero_level is not None:
             used.append(segment.zero_level)
         for component in self.components:
+            used += [component.velocity, *component.width_parameters]
             used += [
-                position
-                for position in (component.velocity, component.b, component.temperature,
-                                 component.b_turb)
-                if position is not None
+                component.log_columns[ion]
+                for ion, _ in segment.lines
+                if ion in component.log_columns
             ]
-            used += [component.log_columns[ion] for ion, _ in segment.lines
-                     if ion in component.log_columns]
         moving = [p for p in used if self.parameters.ratio[p] != 0.0]
         free = np.unique(self.parameters.index[moving]).astype(np.intp)
         place = {int(k): row for row, k in enumerate(free)}
         return _Workspace(
-            g=np.exp(-grid / C_KMS) / reference,
+            fine=FineGrid(
+                start=math.log(reference) + float(grid[0]) / C_KMS,
+                step=spacing / C_KMS,
+                inverse=np.exp(-grid / C_KMS) / reference,
+            ),
             grid=grid,
             operator=InstrumentOperator(low[good], high[good], grid),
             basis=self._basis(segment)[good],
@@ -314,11 +333,11 @@ class AbsorberModel:
         return np.array([(theta[i] - prior.mean) / prior.sigma for i, prior in self._priors])
 
     def _segment_flux(self, segment: SegmentTerms, work: _Workspace, theta: Array) -> Array:
-        tau = self._depth(segment, work.g, theta)
+        tau = self._depth(segment, work.fine, theta)
         sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
         if sigma != work.sigma:
             work.matrix, work.sigma = work.operator.matrix(sigma), sigma
-        flux = self._polynomial(segment, work.basis, theta) * (work.matrix @ np.exp(-tau))  # type: ignore[operator]
+        flux = self._polynomial(segment, work.basis, theta) * (work.matrix @ np.exp(-tau))
         if segment.zero_level is not None:
             flux = flux + theta[segment.zero_level]
         result: Array = flux
@@ -330,19 +349,20 @@ class AbsorberModel:
     def _depth(
         self,
         segment: SegmentTerms,
-        g: Array,
+        grid: FineGrid,
         theta: Array,
         components: Sequence[ComponentTerms] | None = None,
     ) -> Array:
         x = alpha_variable(theta[self.alpha])
-        tau = np.zeros(g.size)
+        tau = np.zeros(grid.inverse.size)
         for component in self.components if components is None else components:
             s = self._scale(component, theta)
             for ion, lines in segment.lines:
                 position = component.log_columns.get(ion)
                 if position is not None:
                     b = component.widths(theta, lines.masses)
-                    tau += lines.depth(g, s, b, 10.0 ** theta[position], x)
+                    for part, values in lines.parts(grid, s, b, 10.0 ** theta[position], x):
+                        tau[part] += values[0]
         return tau
 
     def residuals_and_jacobian(self, free: Array) -> tuple[Array, Array]:
@@ -376,8 +396,8 @@ class AbsorberModel:
         elif sigma != work.sigma:
             work.matrix, work.sigma = work.operator.matrix(sigma), sigma
         slopes *= -transmission
-        smooth: Array = work.matrix @ transmission  # type: ignore[operator]
-        derivative: Array = work.matrix @ slopes.T  # type: ignore[operator]
+        smooth: Array = work.matrix @ transmission
+        derivative: Array = work.matrix @ slopes.T
         ratio = self.parameters.ratio
         if fwhm_row is not None:
             derivative[:, fwhm_row] += (
@@ -405,33 +425,33 @@ class AbsorberModel:
         dalpha = theta[self.alpha] * PPM
         x = alpha_variable(theta[self.alpha])
         x_by_alpha = 2.0 * (1.0 + dalpha) * PPM
-        tau = np.zeros(work.g.size)
-        slopes = np.zeros((work.free.size, work.g.size))
-
-        def add(position: int | None, slope: Array) -> None:
-            row = rows.get(position) if position is not None else None
-            if row is not None and position is not None:
-                slopes[row] += ratio[position] * slope
-
+        tau = np.zeros(work.grid.size)
+        slopes = np.zeros((work.free.size, work.grid.size))
         for component in self.components:
             s = self._scale(component, theta)
+            # what the rows of `TransitionLines.parts` contribute to, and by what factor
+            targets: list[tuple[int, int, float]] = [
+                (1, component.velocity, 1.0 / (C_KMS + theta[component.velocity])),
+                (2, self.alpha, x_by_alpha),
+                *((3 + i, p, 1.0) for i, p in enumerate(component.width_parameters)),
+            ]
             for ion, lines in segment.lines:
                 position = component.log_columns.get(ion)
                 if position is None:
                     continue
                 b = component.widths(theta, lines.masses)
-                column = 10.0 ** theta[position]
-                depth, by = lines.depth_with_derivatives(work.g, s, b, column, x)
-                tau += depth
-                add(position, _LN10 * depth)
-                add(component.velocity, by.scale / (C_KMS + theta[component.velocity]))
-                add(self.alpha, x_by_alpha * by.x)
-                if component.b is not None:
-                    add(component.b, by.b.sum(axis=0))
-                if component.temperature is not None:
-                    add(component.temperature, (0.5 * DOPPLER_KMS2 / (lines.masses * b)) @ by.b)
-                if component.b_turb is not None:
-                    add(component.b_turb, (theta[component.b_turb] / b) @ by.b)
+                by_width = component.width_slopes(theta, lines.masses, b)
+                wanted = [
+                    (i, rows[p], factor * ratio[p])
+                    for i, p, factor in (*targets, (0, position, _LN10))
+                    if p in rows
+                ]
+                for part, values in lines.parts(
+                    work.fine, s, b, 10.0 ** theta[position], x, by_width
+                ):
+                    tau[part] += values[0]
+                    for i, row, factor in wanted:
+                        slopes[row, part] += factor * values[i]
         return tau, slopes
 
     # -- for tables and plots ---------------------------------------------------------------
@@ -448,11 +468,11 @@ class AbsorberModel:
                 work.grid,
             ).matrix(theta[segment.fwhm] * _FWHM_TO_SIGMA)
             alone = [
-                operator @ np.exp(-self._depth(segment, work.g, theta, [component]))
+                operator @ np.exp(-self._depth(segment, work.fine, theta, [component]))
                 for component in self.components
             ]
             continuum = self._polynomial(segment, self._basis(segment), theta)
-            flux = continuum * (operator @ np.exp(-self._depth(segment, work.g, theta)))
+            flux = continuum * (operator @ np.exp(-self._depth(segment, work.fine, theta)))
             if segment.zero_level is not None:
                 flux = flux + theta[segment.zero_level]
             residual = np.full(flux.size, np.nan)

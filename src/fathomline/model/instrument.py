@@ -57,6 +57,7 @@ def fine_spacing(b: float, sigma: float, peak_depth: float = 1.0) -> float:
         Standard deviation of the line-spread function, km/s.
     peak_depth : float
         Largest central optical depth.
+
     """
     flank = b / max(1.0, math.sqrt(math.log(max(peak_depth, 1.0))))
     width = 1.0 / math.sqrt(1.0 / sigma**2 + 2.0 / flank**2)
@@ -67,7 +68,8 @@ def fine_velocity_grid(low: float, high: float, sigma: float, spacing: float) ->
     """Uniform grid, km/s, over [low, high] plus the reach of the line-spread function."""
     start = low - _REACH * sigma - spacing
     count = math.ceil((high + _REACH * sigma + spacing - start) / spacing) + 1
-    return start + spacing * np.arange(count)
+    grid: Array = start + spacing * np.arange(count, dtype=np.float64)
+    return grid
 
 
 class InstrumentOperator:
@@ -79,6 +81,7 @@ class InstrumentOperator:
         Lower and upper edge of each pixel, km/s.
     grid : array (n_fine,)
         Uniform fine grid, km/s, wide enough for the largest `sigma` that will be asked for.
+
     """
 
     def __init__(self, edges_low: Array, edges_high: Array, grid: Array) -> None:
@@ -121,6 +124,6 @@ class InstrumentOperator:
 
 
 def log_velocity(wavelength: Array, reference: float) -> Array:
-    """v = c ln(λ/λ_ref), km/s: the uniform coordinate of the fine grid."""
+    """V = c ln(λ/λ_ref), km/s: the uniform coordinate of the fine grid."""
     velocity: Array = C_KMS * np.log(wavelength / reference)
     return velocity

@@ -59,6 +59,7 @@ class Parameter:
     fixed : bool
     tie : Tie, optional
     prior : Prior, optional
+
     """
 
     name: str
@@ -71,7 +72,7 @@ class Parameter:
     prior: Prior | None = None
 
 
-class ParameterSet(Sequence[Parameter]):
+class ParameterSet:
     """All parameters of a model in a fixed order, with their ties compiled.
 
     Raises
@@ -79,6 +80,7 @@ class ParameterSet(Sequence[Parameter]):
     FitError
         Two parameters share a name, a tie has no target or runs in a circle, or a start value
         lies outside its bounds.
+
     """
 
     def __init__(self, parameters: Sequence[Parameter]) -> None:
@@ -89,9 +91,7 @@ class ParameterSet(Sequence[Parameter]):
             twice = sorted({n for n in self.names if self.names.count(n) > 1})
             raise FitError(f"two parameters are named {', '.join(twice)}")
         roots = [self._root(i) for i in range(len(self._parameters))]
-        free = [
-            i for i, p in enumerate(self._parameters) if p.tie is None and not p.fixed
-        ]
+        free = [i for i, p in enumerate(self._parameters) if p.tie is None and not p.fixed]
         free_index = {i: k for k, i in enumerate(free)}
         size = len(self._parameters)
         self.index: NDArray[np.intp] = np.zeros(size, dtype=np.intp)

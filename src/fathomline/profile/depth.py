@@ -3,19 +3,31 @@
 For a component of Doppler parameter b and column density N, summed over the isotopic and
 hyperfine lines j of the transition (wavelength λ_j, fraction φ_j of the oscillator strength f),
 
-    τ(λ) = Σ_j K N f φ_j (λ_j/b) H(a_j, u_j),    K = π e² / (m_e c √π),
-    u_j = (c/b) (λ_j s/λ − 1),    a_j = Γ λ_j / (4π b),    s = 1 + z of the component,
+    τ(λ) = Σ_j A_j H(a_j, u_j),    A_j = K N f φ_j λ_j/b_j,    K = π e² / (m_e c √π),
+    u_j = (c/b_j) (λ_j s/λ − 1),    a_j = Γ λ_j / (4π b_j),    s = 1 + z of the component,
 
 which is the Voigt profile in frequency (for instance Mihalas 1978, Stellar Atmospheres, §9-2).
-The rest wavelengths follow α: λ_j = 1e8/(ω_j + q x), so ∂λ_j/∂x = −λ_j² q/1e8.
+The rest wavelengths follow α: λ_j = 1e8/(ω_j + q x), so ∂ln λ_j/∂x = −λ_j q/1e8 =: d_j. With
+k_j = c/b_j the derivatives are sums over four functions of each line,
 
-Arrays have one row per line j and one column per point of the fine grid. The grid is given as
-g = 1/λ, so a shift of the wavelength scale is a factor on g and costs nothing here.
+                   H_j           ∂H_j/∂u    u ∂H_j/∂u     ∂H_j/∂a
+    τ              A
+    ∂τ/∂ln s                     A k        A
+    ∂τ/∂x          A d           A d k      A d           A d a
+    ∂τ/∂p          −A b'/b                  −A b'/b       −A a b'/b
+
+for a parameter p of the width with b' = ∂b_j/∂p, so that one small matrix product forms them all.
+
+Work is done where a line absorbs. Within 8 Doppler widths of the lines the four functions are
+evaluated in full; in the wings by the asymptotic series. There one composite line stands for all
+when their spread (variance σ² in Doppler widths) changes the wing by less than 1e-8 in τ: the
+wing a τ0/(√π u²) of a spread line is larger by the factor 1 + 3σ²/u².
 """
 
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -23,33 +35,45 @@ from numpy.typing import NDArray
 
 from fathomline.atomic import Transition
 from fathomline.constants import C_KMS, DEPTH_CONSTANT
-from fathomline.profile.voigt import voigt, voigt_with_derivatives
+from fathomline.profile.voigt import CORE, SERIES_A, voigt_core, voigt_wing
 
-__all__ = ["DepthDerivatives", "TransitionLines"]
+__all__ = ["FineGrid", "TransitionLines", "WidthSlopes"]
 
 Array = NDArray[np.float64]
 
 # Γ [1/s] λ [Å] / (4π b [km/s]) without unit: 1e-10 m per Å, 1e3 m/s per km/s
 _DAMPING = 1e-13 / (4.0 * math.pi)
 
+_WING_TOLERANCE = 1e-8  # of the optical depth
+
 
 @dataclass(frozen=True, slots=True)
-class DepthDerivatives:
-    """Derivatives of τ, each an array over the grid (the second is over lines and grid).
+class FineGrid:
+    """A grid uniform in ln λ.
 
     Attributes
     ----------
-    scale : array (n,)
-        s ∂τ/∂s = ∂τ/∂ln(1+z): also the derivative to a shift of the wavelength scale.
-    b : array (n_lines, n)
-        ∂τ_j/∂b by line, per km/s; lines of different mass may differ in b.
-    x : array (n,)
-        ∂τ/∂x with x = (α/α0)² − 1.
+    start, step : float
+        First ln λ and spacing.
+    inverse : array (n,)
+        1/λ, Å⁻¹.
+
     """
 
-    scale: Array
-    b: Array
-    x: Array
+    start: float
+    step: float
+    inverse: Array
+
+    def span(self, low: float, high: float) -> tuple[int, int]:
+        """Range of indices whose wavelengths lie in [low, high] Å, clipped to the grid."""
+        first = math.ceil((math.log(low) - self.start) / self.step)
+        last = math.floor((math.log(high) - self.start) / self.step) + 1
+        size = self.inverse.size
+        return min(max(first, 0), size), min(max(last, 0), size)
+
+
+WidthSlopes = Array
+"""∂b_j/∂p: array (n_width_parameters, n_lines)."""
 
 
 class TransitionLines:
@@ -59,9 +83,10 @@ class TransitionLines:
     ----------
     transition : Transition
         With its isotopic and hyperfine components, or as a composite.
+
     """
 
-    __slots__ = ("_gamma", "_omega", "_q", "_strength", "masses", "name")
+    __slots__ = ("_gamma", "_omega", "_q", "_share", "_strength", "masses", "name")
 
     def __init__(self, transition: Transition) -> None:
         components = transition.components
@@ -69,14 +94,9 @@ class TransitionLines:
         self.masses: Array = np.array([c.mass for c in components])
         self._omega: Array = np.array([c.wavenumber for c in components])
         self._strength: Array = np.array([transition.f * c.fraction for c in components])
+        self._share: Array = self._strength / self._strength.sum()
         self._gamma = transition.gamma or 0.0
         self._q = transition.q or 0.0
-
-    def _geometry(self, g: Array, s: float, b: Array, x: float) -> tuple[Array, Array, Array]:
-        rest = 1e8 / (self._omega + self._q * x)
-        u = (C_KMS / b)[:, None] * ((rest * s)[:, None] * g - 1.0)
-        a = self._gamma * _DAMPING * rest / b
-        return rest, u, a
 
     def peak_depth(self, b: Array, column: float) -> float:
         """Central optical depth if all lines of the transition coincided (an upper bound)."""
@@ -89,17 +109,16 @@ class TransitionLines:
         """
         centre = self.peak_depth(np.full(self.masses.size, b), column)
         core = b * math.sqrt(max(math.log(max(centre / depth, 1.0)), 0.0))
-        rest = 1e8 / self._omega.min()
+        rest = 1e8 / float(self._omega.min())
         wing = math.sqrt(centre * self._gamma * _DAMPING * rest * b / (depth * math.sqrt(math.pi)))
-        return max(core, float(wing))
+        return max(core, wing)
 
-    def depth(self, g: Array, s: float, b: Array, column: float, x: float) -> Array:
-        """Optical depth τ (n,).
+    def depth(self, grid: FineGrid, s: float, b: Array, column: float, x: float) -> Array:
+        """Optical depth τ (n,) on the whole grid.
 
         Parameters
         ----------
-        g : array (n,)
-            1/λ, Å⁻¹.
+        grid : FineGrid
         s : float
             1 + z of the component.
         b : array (n_lines,)
@@ -108,30 +127,95 @@ class TransitionLines:
             Column density N, cm⁻².
         x : float
             (α/α0)² − 1.
+
         """
-        rest, u, a = self._geometry(g, s, b, x)
-        amplitude = DEPTH_CONSTANT * column * self._strength * rest / b
-        tau: Array = amplitude @ voigt(a[:, None], u)
+        tau = np.zeros(grid.inverse.size)
+        for part, values in self.parts(grid, s, b, column, x):
+            tau[part] = values[0]
         return tau
 
-    def depth_with_derivatives(
-        self, g: Array, s: float, b: Array, column: float, x: float
-    ) -> tuple[Array, DepthDerivatives]:
-        """Optical depth and its derivatives; parameters as in `depth`."""
-        rest, u, a = self._geometry(g, s, b, x)
-        h, h_u, h_a = voigt_with_derivatives(a[:, None], u)
-        amplitude = DEPTH_CONSTANT * column * self._strength * rest / b
-        tau: Array = amplitude @ h
-        # ∂u/∂ln s = (c/b) λ_j s g = u + c/b
-        u_scale = u + (C_KMS / b)[:, None]
-        tau_u = amplitude[:, None] * h_u
-        tau_a = amplitude[:, None] * h_a
-        shifted = tau_u * u_scale
-        scale: Array = shifted.sum(axis=0)
-        by_b = (amplitude[:, None] * h + tau_u * u + tau_a * a[:, None]) / -b[:, None]
-        if self._q == 0.0:
-            return tau, DepthDerivatives(scale, by_b, np.zeros_like(tau))
-        # λ_j enters the amplitude, u and a, each in proportion
-        dln_rest = -rest * self._q / 1e8
-        by_x: Array = dln_rest @ (amplitude[:, None] * h + shifted + tau_a * a[:, None])
-        return tau, DepthDerivatives(scale, by_b, by_x)
+    def parts(
+        self,
+        grid: FineGrid,
+        s: float,
+        b: Array,
+        column: float,
+        x: float,
+        slopes: WidthSlopes | None = None,
+    ) -> Iterator[tuple[slice, Array]]:
+        """Optical depth, and with `slopes` its derivatives, on the parts of the grid.
+
+        Yields
+        ------
+        slice
+            Of the grid.
+        array (1, n), or (3 + n_width_parameters, n) with `slopes`
+            τ; s ∂τ/∂s (also the derivative to a shift of the wavelength scale); ∂τ/∂x; and ∂τ/∂p
+            for each parameter p of the width.
+
+        """
+        rest = 1e8 / (self._omega + self._q * x)
+        strength = DEPTH_CONSTANT * column * self._strength
+        first, last = 0, grid.inverse.size
+        if self._gamma * _DAMPING * rest.max() / b.min() <= SERIES_A:
+            half = CORE * b.max() / C_KMS
+            first, last = grid.span(rest.min() * s / (1.0 + half), rest.max() * s / (1.0 - half))
+        if first < last:
+            values = self._values(
+                grid.inverse[first:last], s, b, x, rest, strength, slopes, core=True
+            )
+            yield slice(first, last), values
+        wings = [w for w in (slice(0, first), slice(last, grid.inverse.size)) if w.stop > w.start]
+        if wings and self._merges_in_wings(rest, b, strength):
+            share = self._share
+            rest, strength = np.array([share @ rest]), np.array([strength.sum()])
+            b = np.array([share @ b])
+            slopes = None if slopes is None else (slopes @ share)[:, None]
+        for wing in wings:
+            yield (
+                wing,
+                self._values(grid.inverse[wing], s, b, x, rest, strength, slopes, core=False),
+            )
+
+    def _merges_in_wings(self, rest: Array, b: Array, strength: Array) -> bool:
+        mean = self._share @ rest
+        spread = C_KMS / b.min() * (rest / mean - 1.0)
+        factor = 3.0 * float(self._share @ spread**2) / CORE**4 / math.sqrt(math.pi)
+        damped = strength.sum() * (mean / b.min()) ** 2 * self._gamma * _DAMPING
+        return bool(factor * damped < _WING_TOLERANCE)
+
+    def _values(
+        self,
+        inverse: Array,
+        s: float,
+        b: Array,
+        x: float,
+        rest: Array,
+        strength: Array,
+        slopes: WidthSlopes | None,
+        *,
+        core: bool,
+    ) -> Array:
+        k = C_KMS / b
+        u = (k * rest * s)[:, None] * inverse
+        u -= k[:, None]
+        a = self._gamma * _DAMPING * rest / b
+        amplitude = strength * rest / b
+        functions = (voigt_core if core else voigt_wing)(a, u, derivatives=slopes is not None)
+        if slopes is None:
+            tau: Array = amplitude[None, :] @ functions[0]
+            return tau
+        coefficients = np.zeros((3 + slopes.shape[0], 4, b.size))
+        coefficients[0, 0] = amplitude
+        coefficients[1, 1] = amplitude * k
+        coefficients[1, 2] = amplitude
+        d = amplitude * (-self._q / 1e8) * rest
+        coefficients[2] = d, d * k, d, d * a
+        relative = -amplitude * slopes / b
+        coefficients[3:, 0] = relative
+        coefficients[3:, 2] = relative
+        coefficients[3:, 3] = relative * a
+        values: Array = coefficients.reshape(3 + slopes.shape[0], -1) @ functions.reshape(
+            -1, u.shape[1]
+        )
+        return values

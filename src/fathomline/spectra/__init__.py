@@ -11,6 +11,7 @@ from fathomline.spectra.reading import Reading
 from fathomline.spectra.spectrum import Spectrum
 from fathomline.spectra.summary import SpectrumSummary, summarise
 from fathomline.spectra.units import ALLOWED_UNITS
+from fathomline.spectra.write import write_spectrum
 
 __all__ = [
     "AIR_FORMULAS",
@@ -30,4 +31,5 @@ __all__ = [
     "summarise",
     "to_barycentric",
     "vacuum_to_air",
+    "write_spectrum",
 ]

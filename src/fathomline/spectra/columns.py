@@ -19,6 +19,7 @@ from fathomline.errors import SpectrumError
 
 __all__ = [
     "COLUMN_NAMES",
+    "GZIP_MAGIC",
     "ROLES",
     "RawSpectrum",
     "check_columns",
@@ -26,11 +27,16 @@ __all__ = [
     "error_from",
     "error_kind",
     "fold",
+    "is_logarithm",
     "medium_of_name",
+    "nearest",
     "role_of",
 ]
 
 FloatArray = NDArray[np.float64]
+
+GZIP_MAGIC = b"\x1f\x8b"
+"""First bytes of a file compressed with gzip."""
 
 ROLES: tuple[str, ...] = ("wavelength", "flux", "error", "continuum")
 """Roles that a column can play, in the order of files without column names."""

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -17,7 +19,7 @@ from fathomline.spectra.columns import (
     fold,
     role_of,
 )
-from fathomline.spectra.read_fits import image_wavelength, open_fits
+from fathomline.spectra.read_fits import header_values, image_wavelength, open_fits
 from fathomline.spectra.read_text import read_text_table
 
 __all__ = ["add_companion"]
@@ -117,18 +119,18 @@ def _from_text(path: Path, role: str, where: str, raw: RawSpectrum) -> _Companio
 def _from_fits(path: Path, role: str, where: str, raw: RawSpectrum) -> _Companion:
     notes: list[str] = []
     with open_fits(path, where, notes) as hdus:
-        found = _search(hdus, role, where)
+        found = _search(hdus, role, where, notes)
     raw.warnings.extend(notes)
     return found
 
 
-def _search(hdus: list[object], role: str, where: str) -> _Companion:
+def _search(hdus: Iterable[Any], role: str, where: str, notes: list[str]) -> _Companion:
     images: list[tuple[str, FloatArray, FloatArray | None]] = []
     for hdu in hdus:
         data = getattr(hdu, "data", None)
         if data is None or not np.size(data):
             continue
-        header = {card.keyword.upper(): card.value for card in hdu.header.cards}  # type: ignore[attr-defined]
+        header = header_values(notes, hdu)
         names = list(hdu.columns.names) if hasattr(hdu, "columns") else None
         if names is not None:
             index = _preferred(names, role)

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 
 from fathomline.errors import SpectrumError
-from fathomline.spectra.columns import FloatArray, RawSpectrum, check_columns
+from fathomline.spectra.columns import GZIP_MAGIC, FloatArray, RawSpectrum, check_columns
 from fathomline.spectra.companions import add_companion
 from fathomline.spectra.frames import header_velocity, to_barycentric
 from fathomline.spectra.line_spread import LineSpread
@@ -171,9 +171,12 @@ def _probe(path: Path, where: str) -> tuple[str, bool]:
     except OSError as exc:
         raise SpectrumError(f"{where}: the file cannot be read: {exc}") from exc
     if not content.strip():
-        raise SpectrumError(f"{where}: the file is empty")
+        raise SpectrumError(
+            f"{where}: the file is empty; expected a FITS file, or text with wavelength, flux and "
+            "error columns"
+        )
     digest = hashlib.sha256(content).hexdigest()
-    if content[:2] == b"\x1f\x8b":
+    if content[:2] == GZIP_MAGIC:
         import gzip
         import zlib
 
@@ -222,11 +225,11 @@ def _stated_medium(raw: RawSpectrum) -> tuple[str, str] | None:
             return "air", key
         if value.startswith("vac"):
             return "vacuum", key
-    value = header.get("VACUUM")
-    text = str(value).strip().casefold()
-    if value is True or text in ("t", "true", "1", "yes"):
+    # a FITS logical arrives as bool, the same keyword in a text file as text
+    text = str(header.get("VACUUM", "")).strip().casefold()
+    if text in ("t", "true", "1", "yes"):
         return "vacuum", "VACUUM"
-    if value is False or text in ("f", "false", "0", "no"):
+    if text in ("f", "false", "0", "no"):
         return "air", "VACUUM"
     return None
 

@@ -15,6 +15,8 @@
 
 from __future__ import annotations
 
+import gzip
+import io
 import warnings
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
@@ -23,9 +25,10 @@ from typing import Any
 
 import numpy as np
 
-from fathomline.errors import SpectrumError
+from fathomline.errors import FathomlineError, SpectrumError
 from fathomline.spectra.columns import (
     COLUMN_NAMES,
+    GZIP_MAGIC,
     ROLES,
     FloatArray,
     RawSpectrum,
@@ -39,7 +42,7 @@ from fathomline.spectra.columns import (
     role_of,
 )
 
-__all__ = ["image_wavelength", "open_fits", "read_fits"]
+__all__ = ["header_values", "image_wavelength", "open_fits", "read_fits"]
 
 _TRUNCATED = ("truncated", "unexpected end of file")
 
@@ -63,24 +66,35 @@ def open_fits(path: Path, where: str, notes: list[str]) -> Iterator[Any]:
     """
     from astropy.io import fits
 
+    def fault(exc: Exception) -> SpectrumError:
+        return SpectrumError(
+            f"{where}: the FITS file cannot be read, it may be truncated or damaged; copy it again "
+            f"from its origin ({type(exc).__name__}: {' '.join(str(exc).split())})"
+        )
+
     with warnings.catch_warnings(record=True) as caught:
         warnings.simplefilter("always")
         try:
-            hdus = fits.open(path, memmap=False, lazy_load_hdus=False)
+            content = path.read_bytes()
+            if content[:2] == GZIP_MAGIC:
+                content = gzip.decompress(content)
+            # from memory, because astropy leaves the files open that it fails on
+            hdus = fits.open(io.BytesIO(content), lazy_load_hdus=False)
             for hdu in hdus:
                 _ = hdu.data  # a truncated file shows only when its data are read
         except Exception as exc:  # astropy raises many types for a damaged file
-            raise SpectrumError(
-                f"{where}: the FITS file cannot be read, it may be truncated or damaged; "
-                f"copy it again from its origin ({type(exc).__name__}: {exc})"
-            ) from exc
+            raise fault(exc) from exc
         texts = [str(entry.message) for entry in caught]
-        with hdus:
-            if any(word in text for text in texts for word in _TRUNCATED):
-                raise SpectrumError(
-                    f"{where}: the FITS file is truncated; copy it again from its origin"
-                )
+        if any(word in text for text in texts for word in _TRUNCATED):
+            raise SpectrumError(
+                f"{where}: the FITS file is truncated; copy it again from its origin"
+            )
+        try:
             yield hdus
+        except FathomlineError:
+            raise
+        except Exception as exc:  # columns and cards are parsed late
+            raise fault(exc) from exc
     for entry in caught:
         text = " ".join(str(entry.message).split())
         note = f"while the FITS file was read: {text}"
@@ -88,13 +102,19 @@ def open_fits(path: Path, where: str, notes: list[str]) -> Iterator[Any]:
             notes.append(note)
 
 
-def _header(*hdus: Any) -> dict[str, Any]:
-    """Return keywords of all HDUs; later ones override, for extensions state more precisely."""
+def header_values(notes: list[str], *hdus: Any) -> dict[str, Any]:
+    """Return upper-case keyword to value of all HDUs; cards that cannot be parsed become notes.
+
+    Later HDUs override, because extensions state more precisely than the primary header.
+    """
     result: dict[str, Any] = {}
     for hdu in hdus:
         for card in hdu.header.cards:
-            if card.keyword and card.keyword not in ("COMMENT", "HISTORY"):
-                result[card.keyword.upper()] = card.value
+            try:
+                if card.keyword and card.keyword not in ("COMMENT", "HISTORY"):
+                    result[card.keyword.upper()] = card.value
+            except Exception as exc:  # one bad card does not spoil the numbers
+                notes.append(f"a header card was not used: {' '.join(str(exc).split())}")
     return result
 
 
@@ -157,11 +177,13 @@ def _read_table(
         tables[0],
     )
     names = list(table.columns.names)
-    header = _header(primary, table)
     required = ROLES[:2] if error_elsewhere else ROLES[:3]
-    chosen, guesses, notes = choose_columns(
-        names, columns, where, required=required, hints=_hints(table.header, names)
+    notes: list[str] = []
+    header = header_values(notes, primary, table)
+    chosen, guesses, more = choose_columns(
+        names, columns, where, required=required, hints=_hints(header, names)
     )
+    notes.extend(more)
     rows = len(table.data)
     if rows == 0:
         raise SpectrumError(f"{where}: the table {table.name or 'in the file'} has zero rows")
@@ -211,7 +233,7 @@ def _read_table(
     )
 
 
-def _hints(header: Any, names: list[str]) -> dict[str, int]:
+def _hints(header: Mapping[str, Any], names: list[str]) -> dict[str, int]:
     """Return roles stated by TUTYPn keywords."""
     hints: dict[str, int] = {}
     for i in range(len(names)):
@@ -244,6 +266,18 @@ def _axis(hdu: Any, name: str, where: str) -> FloatArray:
             "the spectrum, or write it as a table with wavelength, flux and error columns"
         )
     return squeezed
+
+
+def _keyword(
+    header: Mapping[str, Any], key: str, where: str, default: float | None = None
+) -> float:
+    value = header.get(key, default)
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise SpectrumError(
+            f"{where}: the image has no wavelength scale: expected a number in {key}, found "
+            f"{value!r}. Write the spectrum as a table with a wavelength column"
+        )
+    return float(value)
 
 
 def image_wavelength(
@@ -279,19 +313,15 @@ def image_wavelength(
     """
     ctype = str(header.get("CTYPE1", "")).strip().upper()
     unit = str(header.get("CUNIT1", "")).strip() or None
-    step = header.get("CD1_1", header.get("CDELT1"))
-    start, reference = header.get("CRVAL1"), header.get("CRPIX1", 1.0)
-    for key, value in {"CRVAL1": start, "CDELT1 or CD1_1": step, "CRPIX1": reference}.items():
-        if isinstance(value, bool) or not isinstance(value, int | float):
-            raise SpectrumError(
-                f"{where}: the image has no wavelength scale: expected a number in {key}, found "
-                f"{value!r}. Write the spectrum as a table with a wavelength column"
-            )
-    if "CD1_1" not in header:
-        step = step * header.get("PC1_1", 1.0)
+    start = _keyword(header, "CRVAL1", where)
+    reference = _keyword(header, "CRPIX1", where, 1.0)
+    if "CD1_1" in header:
+        step = _keyword(header, "CD1_1", where)
+    else:
+        step = _keyword(header, "CDELT1", where) * _keyword(header, "PC1_1", where, 1.0)
     if step == 0:
         raise SpectrumError(f"{where}: the wavelength step (CDELT1 or CD1_1) is zero")
-    w = (np.arange(1, n + 1, dtype=np.float64) - float(reference)) * float(step)
+    w = (np.arange(1, n + 1, dtype=np.float64) - reference) * step
     kind, _, algorithm = ctype.partition("-")
     algorithm = algorithm.strip("-")
     medium = {"AWAV": "air", "WAVE": "vacuum"}.get(kind)
@@ -308,12 +338,12 @@ def image_wavelength(
     if algorithm == "LOG":
         if start == 0:
             raise SpectrumError(f"{where}: CRVAL1 = 0 is impossible with CTYPE1 = {ctype!r}")
-        return float(start) * np.exp(w / float(start)), unit, medium, "log-linear (CTYPE1)"
+        return start * np.exp(w / start), unit, medium, "log-linear (CTYPE1)"
     if header.get("DC-FLAG") in (1, "1"):
         if unit is None or "(" not in unit:
             unit = f"log10({unit})" if unit else "log10(Angstrom)"
-        return float(start) + w, unit, medium, "log-linear (DC-FLAG)"
-    return float(start) + w, unit, medium, "linear"
+        return start + w, unit, medium, "log-linear (DC-FLAG)"
+    return start + w, unit, medium, "linear"
 
 
 def _read_image(
@@ -356,7 +386,8 @@ def _read_image(
         )
     main = found["flux"]
     flux = _axis(main, "the flux image", where)
-    header = _header(primary, main) if main is not primary else _header(main)
+    notes: list[str] = []
+    header = header_values(notes, primary, *([] if main is primary else [main]))
     wavelength, unit, medium, scale = image_wavelength(header, flux.size, where)
     guesses, steps = [], []
     values: dict[str, FloatArray] = {}
@@ -384,6 +415,6 @@ def _read_image(
         medium=(medium, "CTYPE1") if medium else None,
         header=header,
         guesses=guesses,
-        warnings=[],
+        warnings=notes,
         steps=steps,
     )

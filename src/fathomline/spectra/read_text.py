@@ -21,6 +21,7 @@ import numpy as np
 
 from fathomline.errors import SpectrumError
 from fathomline.spectra.columns import (
+    GZIP_MAGIC,
     ROLES,
     FloatArray,
     RawSpectrum,
@@ -132,7 +133,8 @@ def _ecsv_header(comments: list[str], where: str) -> tuple[dict[str, str], dict[
         metadata = dict(header.get("meta") or {})
     except Exception as exc:  # the YAML library has its own tree of exceptions
         raise SpectrumError(
-            f"{where}: the ECSV header (the lines beginning with #) cannot be read: {exc}"
+            f"{where}: the ECSV header (the lines beginning with #) cannot be read "
+            f"({type(exc).__name__} {exc}); write the file again, or remove its comment lines"
         ) from exc
     return units, {str(key).upper(): value for key, value in metadata.items()}
 
@@ -148,7 +150,7 @@ def read_text_table(path: Path, where: str) -> TextTable:
     """
     try:
         data = path.read_bytes()
-        if data[:2] == b"\x1f\x8b":
+        if data[:2] == GZIP_MAGIC:
             data = gzip.decompress(data)
         text = data.decode("utf-8-sig")
     except (UnicodeDecodeError, EOFError, OSError) as exc:
@@ -166,7 +168,10 @@ def read_text_table(path: Path, where: str) -> TextTable:
         elif stripped:
             rows.append((number, stripped))
     if not rows:
-        raise SpectrumError(f"{where}: the file has no rows of data")
+        raise SpectrumError(
+            f"{where}: the file has no rows of data; expected one row of wavelength, flux and "
+            "error for each pixel"
+        )
 
     ecsv = bool(comments) and comments[0].strip().startswith("%ECSV")
     unit_of: dict[str, str] = {}

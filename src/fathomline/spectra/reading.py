@@ -9,14 +9,9 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
-from types import MappingProxyType
 from typing import Any
 
 __all__ = ["Reading"]
-
-
-def _empty() -> Mapping[str, Any]:
-    return MappingProxyType({})
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,10 +53,10 @@ class Reading:
 
     file: str | None = None
     file_digest: str | None = None
-    companions: Mapping[str, Mapping[str, str]] = field(default_factory=_empty)
+    companions: Mapping[str, Mapping[str, str]] = field(default_factory=dict)
     format: str = "arrays"
-    columns: Mapping[str, str] = field(default_factory=_empty)
-    units: Mapping[str, str] = field(default_factory=_empty)
+    columns: Mapping[str, str] = field(default_factory=dict)
+    units: Mapping[str, str] = field(default_factory=dict)
     unit_source: str = "argument"
     medium: str = "vacuum"
     medium_source: str = "argument"
@@ -69,7 +64,7 @@ class Reading:
     frame_source: str = "argument"
     barycentric_velocity: float | None = None
     pixels: int = 0
-    masked: Mapping[str, int] = field(default_factory=_empty)
+    masked: Mapping[str, int] = field(default_factory=dict)
     masked_pixels: int = 0
     guesses: tuple[str, ...] = ()
     warnings: tuple[str, ...] = ()

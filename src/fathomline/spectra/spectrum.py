@@ -78,28 +78,27 @@ def _freeze(values: NDArray[Any]) -> NDArray[Any]:
 
 def _check_increasing(wavelength: FloatArray, reverse: bool, where: str) -> None:
     """Refuse an axis that is not strictly increasing, with the first bad row (counted from 1)."""
+    if reverse:  # rows are counted in the order in which they were given
+        wavelength = wavelength[::-1]
     finite = np.isfinite(wavelength)
-    n = wavelength.size
     if not finite.all():
         at = int(np.argmin(finite))
-        row = n - at if reverse else at + 1
         raise SpectrumError(
-            f"{where}: the wavelength of row {row} is {wavelength[at]}; every pixel needs a finite "
-            "wavelength. Remove the row; to mask a pixel, set its error to -1"
+            f"{where}: the wavelength of row {at + 1} is {wavelength[at]}; every pixel needs a "
+            "finite wavelength. Remove the row; to mask a pixel, set its error to -1"
         )
     if wavelength.min() <= 0.0:
         at = int(np.argmax(wavelength <= 0.0))
-        row = n - at if reverse else at + 1
         raise SpectrumError(
-            f"{where}: the wavelength of row {row} is {wavelength[at]}, but must be positive"
+            f"{where}: the wavelength of row {at + 1} is {wavelength[at]}, but must be positive"
         )
-    bad = np.diff(wavelength) <= 0.0
+    step = np.diff(wavelength)
+    bad = step >= 0.0 if reverse else step <= 0.0
     if bad.any():
         at = int(np.argmax(bad))
-        row = n - at - 1 if reverse else at + 2
-        kind = "repeats" if wavelength[at] == wavelength[at + 1] else "is out of order with"
+        kind = "repeats" if step[at] == 0.0 else "is out of order with"
         raise SpectrumError(
-            f"{where}: the wavelength of row {row} {kind} its neighbour "
+            f"{where}: the wavelength of row {at + 2} {kind} its neighbour "
             f"({wavelength[at]:.10g} then {wavelength[at + 1]:.10g}); wavelengths must change "
             "strictly in one direction. Sort the rows, and merge overlapping orders first"
         )
@@ -209,6 +208,13 @@ class Spectrum:
         if self.lsf is not None and not isinstance(self.lsf, LineSpread):
             raise SpectrumError(f"{where}: lsf must be a line-spread function or None")
 
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        # numpy forgets that an array was read-only when it travels to a worker process
+        for key, values in state.items():
+            if isinstance(values, np.ndarray):
+                _freeze(values)
+            object.__setattr__(self, key, values)
+
     @classmethod
     def from_arrays(
         cls,
@@ -280,7 +286,7 @@ class Spectrum:
 
         steps = record.steps
         # the majority decides the direction, so that one bad row is blamed and not all the others
-        reverse = np.count_nonzero(np.diff(waves) < 0.0) > (n - 1) / 2
+        reverse = bool(np.count_nonzero(np.diff(waves) < 0.0) > (n - 1) / 2)
         if reverse:
             waves = waves[::-1]
             arrays = {key: values[::-1] for key, values in arrays.items()}

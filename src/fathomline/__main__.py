@@ -1,0 +1,5 @@
+"""``python -m fathomline`` is the command line."""
+
+from fathomline.cli import main
+
+main()

@@ -1,0 +1,225 @@
+"""The tables of a measurement as astropy tables with units and descriptions.
+
+A number that is not available is a masked entry, and the row says why: in ``flags`` of the
+measurement, in ``note`` elsewhere.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import Any
+
+import numpy as np
+
+import fathomline
+from fathomline.job.building import ALPHA
+from fathomline.job.measurement import Measurement
+
+__all__ = [
+    "budget_table",
+    "components_table",
+    "covariance_table",
+    "measurement_table",
+    "transitions_table",
+]
+
+Table = Any  # astropy.table.Table, which is imported late
+
+Cell = float | int | bool | str | None
+
+
+def _table(columns: Iterable[tuple[str, str | None, str, list[Cell]]], **meta: str) -> Table:
+    """A table from (name, unit, description, values); None is masked."""
+    from astropy.table import MaskedColumn
+    from astropy.table import Table as AstropyTable
+
+    table = AstropyTable(meta=meta, masked=False)
+    for name, unit, description, values in columns:
+        known = [value for value in values if value is not None]
+        filler: Cell = known[0] if known else 0.0
+        if isinstance(filler, float) or not known:
+            filler = 0.0  # a masked field holds 0 and not a copy of another row
+        data = np.array([filler if value is None else value for value in values])
+        mask = np.array([value is None for value in values])
+        column = MaskedColumn(data, name=name, unit=unit, description=description, mask=mask)
+        table.add_column(column if mask.any() else column.filled())
+    return table
+
+
+def measurement_table(m: Measurement) -> Table:
+    """One row: the absorber, Δα/α with its errors, the quality of the fit, and flags."""
+    absorber, fit = m.job.absorber, m.fit
+    return _table(
+        [
+            ("absorber", None, "name of the absorber", [absorber.name]),
+            ("ra", "deg", "right ascension, ICRS", [absorber.ra]),
+            ("dec", "deg", "declination, ICRS", [absorber.dec]),
+            ("z_abs", None, "redshift of zero velocity", [absorber.redshift]),
+            (
+                "n_transitions",
+                None,
+                "transitions fitted",
+                [len({t.name for t in m.built.transitions})],
+            ),
+            ("n_components", None, "velocity components", [len(m.job.components)]),
+            ("n_free", None, "free parameters", [fit.n_free]),
+            ("dalpha_ppm", None, "relative change of alpha, 1e-6", [m.dalpha]),
+            ("stat_ppm", None, "statistical error, 1 sigma, 1e-6", [m.stat]),
+            (
+                "sys_ppm",
+                None,
+                "systematic error, 1 sigma, 1e-6; masked: no budget was made",
+                [None],
+            ),
+            ("total_ppm", None, "total error, 1 sigma, 1e-6; masked: no budget was made", [None]),
+            ("chi2", None, "chi squared of pixels and priors", [fit.chi2]),
+            ("ndof", None, "degrees of freedom", [fit.ndof]),
+            ("chi2_nu", None, "chi squared per degree of freedom", [fit.chi2_nu]),
+            (
+                "aicc",
+                None,
+                "Akaike criterion with small-sample term",
+                [fit.aicc if np.isfinite(fit.aicc) else None],
+            ),
+            (
+                "converged",
+                None,
+                "minimum reached, and every restart returned to it",
+                [fit.converged],
+            ),
+            ("blinded", None, "whether dalpha_ppm is hidden", [False]),
+            ("flags", None, "comma-separated; empty: nothing to report", [",".join(m.flags)]),
+            ("fathomline_version", None, "version of the program", [fathomline.__version__]),
+            ("job_digest", None, "SHA-256 of the job", [m.digest]),
+        ],
+        flags="; ".join(f"{flag}: {text}" for flag, text in sorted(m.flag_meanings().items())),
+    )
+
+
+def budget_table(m: Measurement) -> Table:
+    """One row per term of the error budget; for now the statistical one."""
+    reason = "" if m.stat is not None else ",".join(m.fit.flags)
+    return _table(
+        [
+            ("term", None, "name of the term", ["statistical"]),
+            ("kind", None, "statistical or systematic", ["statistical"]),
+            ("shift_ppm", None, "shift of dalpha/alpha, 1e-6", [None]),
+            ("sigma_ppm", None, "1 sigma error, 1e-6", [m.stat]),
+            ("method", None, "how it was found", ["covariance"]),
+            ("n_refits", None, "refits behind it", [0]),
+            ("shared", None, "tag shared with other absorbers", [""]),
+            ("response_ppm", None, "signed shift per unit of the shared error, 1e-6", [None]),
+            (
+                "note",
+                None,
+                "remark",
+                [reason or "photon noise with every free parameter marginalised"],
+            ),
+        ]
+    )
+
+
+def components_table(m: Measurement) -> Table:
+    """One row per velocity component, with errors and, where there is none, the reason."""
+    components = m.job.components
+    notes: list[list[str]] = [[] for _ in components]
+    columns: list[tuple[str, str | None, str, list[Cell]]] = [
+        ("component", None, "number of the component", list(range(1, len(components) + 1)))
+    ]
+
+    def add(column: str, unit: str | None, text: str, key: str) -> None:
+        values: list[Cell] = []
+        errors: list[Cell] = []
+        for k in range(len(components)):
+            name = f"component[{k + 1}].{key}"
+            values.append(m.fit.values.get(name))
+            error = m.error(name) if name in m.fit.values else None
+            errors.append(error if isinstance(error, float) else None)
+            if isinstance(error, str):
+                notes[k].append(f"{column}: {error}")
+        if any(value is not None for value in values):
+            columns.append((column, unit, text, values))
+            columns.append((f"{column}_err", unit, f"1 sigma error of {column}", errors))
+
+    add("velocity", "km / s", "velocity about z_abs", "velocity")
+    add("b", "km / s", "Doppler parameter of turbulence", "b")
+    add("temperature", "K", "kinetic temperature", "temperature")
+    add("b_turb", "km / s", "turbulent part of the Doppler parameter", "b_turb")
+    for ion in dict.fromkeys(ion for component in components for ion in component.logN):
+        add(f"logN {ion}", None, f"log10 of the column density of {ion} in cm-2", f'logN["{ion}"]')
+    columns.append(("note", None, "why an error is missing", [", ".join(n) for n in notes]))
+    return _table(columns, absorber=m.job.absorber.name)
+
+
+def transitions_table(m: Measurement) -> Table:
+    """One row per region: pixels, signal-to-noise, share of the information, χ²."""
+    shares = m.shares
+    return _table(
+        [
+            ("transition", None, "ion and label", [s.transition for s in shares]),
+            (
+                "wavelength",
+                "Angstrom",
+                "observed vacuum wavelength at z_abs",
+                [t.observed_wavelength(m.job.absorber.redshift) for t in m.built.transitions],
+            ),
+            (
+                "sensitivity",
+                "m / s",
+                "velocity shift per 1e-6 of dalpha/alpha",
+                [t.sensitivity for t in m.built.transitions],
+            ),
+            ("n_pixels", None, "pixels fitted", [s.n_pixels for s in shares]),
+            (
+                "snr",
+                None,
+                "median signal-to-noise ratio per pixel at the continuum",
+                [s.snr for s in shares],
+            ),
+            (
+                "information",
+                None,
+                "share of the information on dalpha/alpha; sums to 1",
+                [s.information for s in shares],
+            ),
+            ("chi2", None, "chi squared of its pixels", [s.chi2 for s in shares]),
+            (
+                "chi2_share",
+                None,
+                "chi squared over that of all pixels",
+                [s.chi2 / sum(r.chi2 for r in shares) for s in shares],
+            ),
+        ],
+        absorber=m.job.absorber.name,
+    )
+
+
+def covariance_table(m: Measurement) -> Table:
+    """Named covariance of all free parameters: one row and one column for each."""
+    covariance = m.fit.covariance
+    names = list(covariance.names)
+    columns: list[tuple[str, str | None, str, list[Cell]]] = [
+        ("parameter", None, "name", list(names)),
+        ("value", None, "best value", [m.fit.values[name] for name in names]),
+        ("sigma", None, "1 sigma error", [covariance.sigma(name) for name in names]),
+        (
+            "note",
+            None,
+            "why an error is missing",
+            [covariance.reasons.get(name, "") for name in names],
+        ),
+    ]
+    for j, name in enumerate(names):
+        lost = name in covariance.reasons
+        columns.append(
+            (
+                name,
+                None,
+                f"covariance with {name}",
+                [
+                    None if lost or other in covariance.reasons else float(covariance.matrix[i, j])
+                    for i, other in enumerate(names)
+                ],
+            )
+        )
+    return _table(columns, absorber=m.job.absorber.name, alpha=ALPHA)
