@@ -1,7 +1,7 @@
 """The fit of one model: minimise, then show that the minimum does not depend on the start.
 
-After convergence the fit is repeated from perturbed values: Δα/α moved by ±10 σ in turn, and every
-other parameter drawn around its best value with its own σ. A restart has returned when
+After convergence the fit is repeated from perturbed values: all parameters drawn together from their
+covariance about the best values, and then Δα/α alone moved to ±10 σ in turn. A restart has returned when
 Δα/α agrees to 0.02 σ and χ² to 0.01. When a restart finds a lower χ² it becomes the result, and
 the restarts begin anew. A fit is called converged only when the minimiser converged and every
 restart returned.
@@ -151,11 +151,11 @@ def _restart(
 ) -> tuple[list[Restart], Minimum | None]:
     """All restarts from around `best`; stops early with a better minimum if one is found."""
     parameters = model.parameters
-    sigmas = covariance.sigmas
+    sigmas, spread = covariance.sigmas, covariance.root()
     alpha = _free_alpha(model)
     records: list[Restart] = []
     for k in range(settings.restarts):
-        start = best.x + sigmas * rng.standard_normal(best.x.size)
+        start = best.x + spread @ rng.standard_normal(best.x.size)
         if alpha is not None:
             start[alpha] = best.x[alpha] + (-1) ** k * RESTART_SHIFT * sigmas[alpha]
         start = np.clip(start, parameters.lower, parameters.upper)
