@@ -2,12 +2,15 @@
 
 A *segment* is one region in one spectrum. In a segment the normalised flux of a pixel is
 
-    y = p(ξ) · [W e^{−τ}] + y0,     τ = Σ_k Σ_i τ_{k i},
+    y = p(ξ) · [W T] + y0,     T = e^{−τ},     τ = Σ_k Σ_i τ_{k i},
 
 with W the instrument operator (`fathomline.model.instrument`), p a polynomial in Legendre form
 over the window (ξ from −1 to 1), y0 the zero level, and τ the optical depth of every component k
-in every transition i that falls near the window. Residuals are (data − model)/error; Gaussian
-priors add one residual each.
+in every transition i that falls near the window. Light of true wavelength λ is recorded at
+λ(1 + v_d/c), with v_d a sum of coefficients times given functions of the recorded wavelength: the
+fine grid is one of recorded wavelengths, at which the true 1/λ is larger by 1 + v_d/c. Where groups
+of components cover only the part C_g of the source, T = e^{−τ_0} Π_g (1 − C_g + C_g e^{−τ_g}).
+Residuals are (data − model)/error; Gaussian priors add one residual each.
 
 Everything is laid out once, for all segments together, so that an evaluation is a fixed number of
 array operations however many components there are:
@@ -23,7 +26,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -32,7 +34,7 @@ from numpy.typing import NDArray
 from scipy.sparse import csr_array
 
 from fathomline.atomic import alpha_variable
-from fathomline.constants import C_KMS, DOPPLER_KMS2, PPM
+from fathomline.constants import C_KMS, C_MS, DOPPLER_KMS2, PPM
 from fathomline.errors import FitError
 from fathomline.model.instrument import (
     InstrumentOperator,
@@ -40,176 +42,21 @@ from fathomline.model.instrument import (
     fine_velocity_grid,
     log_velocity,
 )
+from fathomline.model.layout import Item, Layout
 from fathomline.model.parameters import ParameterSet
-from fathomline.profile import FineGrid, LineItem, LineTable, TransitionLines
+from fathomline.model.terms import ComponentTerms, SegmentPrediction, SegmentTerms
+from fathomline.profile import FineGrid, LineItem, LineTable
+from fathomline.spectra import FWHM_PER_SIGMA
 
-__all__ = ["AbsorberModel", "ComponentTerms", "SegmentPrediction", "SegmentTerms"]
+__all__ = ["AbsorberModel"]
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
 
 _LN10 = math.log(10.0)
-_FWHM_TO_SIGMA = 1.0 / (2.0 * math.sqrt(2.0 * math.log(2.0)))
 _GROWTH = 1.0  # dex that a column density may gain before the wings were merged too boldly
 _ONE, _LOG_COLUMN, _VELOCITY, _ALPHA = range(4)  # factors of the chain rule
 _WIDEST = 1.5  # the fine grid leaves room for a line-spread function this much wider
-
-
-@dataclass(frozen=True, slots=True)
-class ComponentTerms:
-    """Places of a component's parameters in the full vector.
-
-    Either `b` (turbulent broadening, shared by all ions) or `temperature` (thermal, with
-    `b_turb` added in quadrature when given).
-    """
-
-    velocity: int
-    log_columns: dict[str, int]
-    b: int | None = None
-    temperature: int | None = None
-    b_turb: int | None = None
-
-    def widths(self, theta: Array, masses: Array) -> Array:
-        """Doppler parameter, km/s, for each mass in u."""
-        if self.b is not None:
-            return np.full(masses.size, theta[self.b])
-        assert self.temperature is not None
-        square = DOPPLER_KMS2 * theta[self.temperature] / masses
-        if self.b_turb is not None:
-            square = square + theta[self.b_turb] ** 2
-        widths: Array = np.sqrt(square)
-        return widths
-
-    @property
-    def width_parameters(self) -> tuple[int, ...]:
-        """Places of the parameters of the width."""
-        return tuple(p for p in (self.b, self.temperature, self.b_turb) if p is not None)
-
-
-@dataclass(frozen=True)
-class SegmentTerms:
-    """One region in one spectrum: its pixels, lines and nuisance parameters.
-
-    Attributes
-    ----------
-    region : int
-        Number of the region, from 0.
-    name : str
-        The transition that the region is about.
-    spectrum : str
-        The id of the spectrum.
-    wavelength, edges_low, edges_high : array (n,)
-        Pixel centres and edges, Å.
-    data, error : array (n,)
-        Flux and its error divided by the continuum of the file.
-    good : bool array (n,)
-        Pixels to fit.
-    lines : tuple of (str, TransitionLines)
-        Ion and lines of every transition that can absorb here.
-    continuum : tuple of int
-        Places of the Legendre coefficients; empty for a continuum held at that of the file.
-    zero_level : int or None
-        Place of the zero level, in units of the file's continuum.
-    fwhm : int
-        Place of the FWHM of the line-spread function, km/s.
-    window : (float, float)
-        Limits of the region in km/s, for plots.
-    rest : float
-        Composite rest wavelength of the region's transition, Å.
-
-    """
-
-    region: int
-    name: str
-    spectrum: str
-    wavelength: Array
-    edges_low: Array
-    edges_high: Array
-    data: Array
-    error: Array
-    good: NDArray[np.bool_]
-    lines: tuple[tuple[str, TransitionLines], ...]
-    continuum: tuple[int, ...]
-    zero_level: int | None
-    fwhm: int
-    window: tuple[float, float]
-    rest: float
-
-
-@dataclass(frozen=True, slots=True)
-class SegmentPrediction:
-    """What the model predicts for every pixel of a segment, masked ones included.
-
-    Attributes
-    ----------
-    flux, continuum, residual : array (n,)
-        In units of the file's continuum; the residual is (data − flux)/error, nan where the pixel
-        is not fitted.
-    components : array (n_components, n)
-        Transmission of each component alone, e^{−τ_k} after the instrument.
-
-    """
-
-    flux: Array
-    continuum: Array
-    residual: Array
-    components: Array
-
-
-class _Layout:
-    """Index maps of a model: which free parameters a segment depends on, and where they go.
-
-    In each segment the slopes have `width` rows: row 0 is the segment's own value (τ, later the
-    transmission), rows 1 to `width` − 2 its free parameters, and the last takes what is not free.
-    """
-
-    def __init__(
-        self,
-        parameters: ParameterSet,
-        alpha: int,
-        components: Sequence[ComponentTerms],
-        segments: Sequence[SegmentTerms],
-        items: Sequence[_Item],
-    ) -> None:
-        self.ratio, self.index = parameters.ratio, parameters.index
-        used: list[list[int]] = [
-            [
-                alpha,
-                segment.fwhm,
-                *segment.continuum,
-                *(() if segment.zero_level is None else (segment.zero_level,)),
-            ]
-            for segment in segments
-        ]
-        for item in items:
-            component = components[item.component]
-            used[item.segment] += [component.velocity, item.column, *component.width_parameters]
-        self.free: list[Indices] = [
-            np.unique([self.index[p] for p in places if self.ratio[p] != 0.0]).astype(np.intp)
-            for places in used
-        ]
-        self.width = 2 + max(free.size for free in self.free)
-        self._place = [{int(k): row for row, k in enumerate(free, start=1)} for free in self.free]
-
-    def row(self, segment: int, position: int | None) -> int:
-        """Row of a parameter in a segment; the last row when it is not free."""
-        if position is None or self.ratio[position] == 0.0:
-            return self.width - 1
-        return self._place[segment][int(self.index[position])]
-
-    def rows(self, positions: Sequence[int | None]) -> Indices:
-        """Row of one parameter for each segment."""
-        return np.array([self.row(k, p) for k, p in enumerate(positions)], dtype=np.intp)
-
-
-@dataclass(frozen=True, slots=True)
-class _Item:
-    """One component in one transition of one segment."""
-
-    segment: int
-    component: int
-    column: int  # place of the column density
-    lines: TransitionLines
 
 
 class AbsorberModel:
@@ -224,6 +71,11 @@ class AbsorberModel:
         Place of Δα/α (ppm) in the full vector.
     components : sequence of ComponentTerms
     segments : sequence of SegmentTerms
+    coverings : sequence of int
+        Place of the covering factor of each group of components.
+    heavy : int, optional
+        Place of the abundance of heavier isotopes relative to the tables, for the lines that were
+        made with one.
     refine : float
         The fine grid is this factor finer than the sampling rule asks for.
     sampled_for : array (n_parameters,), optional
@@ -244,12 +96,14 @@ class AbsorberModel:
         components: Sequence[ComponentTerms],
         segments: Sequence[SegmentTerms],
         *,
+        coverings: Sequence[int] = (),
+        heavy: int | None = None,
         refine: float = 1.0,
         sampled_for: Array | None = None,
     ) -> None:
         self.redshift, self.parameters, self.alpha = redshift, parameters, alpha
         self.components, self.segments = tuple(components), tuple(segments)
-        self.refine = refine
+        self.coverings, self.heavy, self.refine = tuple(coverings), heavy, refine
         self.n_evaluations = 0
         for segment in self.segments:
             if not segment.good.any():
@@ -260,7 +114,7 @@ class AbsorberModel:
         self._priors = parameters.priors()
         theta = parameters.expand(parameters.start) if sampled_for is None else sampled_for
         self._items = [
-            _Item(k, c, component.log_columns[ion], lines)
+            Item(k, c, component.log_columns[ion], lines)
             for k, segment in enumerate(self.segments)
             for c, component in enumerate(self.components)
             for ion, lines in segment.lines
@@ -269,7 +123,9 @@ class AbsorberModel:
         self.spacings = tuple(self.required_spacing(theta))
         self._prepare_grids(theta)
         self._prepare_lines(theta)
-        self._layout = _Layout(parameters, alpha, self.components, self.segments, self._items)
+        self._layout = Layout(
+            parameters, alpha, self.components, self.segments, self._items, self.coverings, heavy
+        )
         self._prepare_sums()
         self._prepare_pixels()
 
@@ -284,7 +140,7 @@ class AbsorberModel:
 
     def required_spacing(self, theta: Array) -> list[float]:
         """Fine-grid spacing, km/s, that the sampling rule asks for in each segment."""
-        sigma = [theta[segment.fwhm] * _FWHM_TO_SIGMA for segment in self.segments]
+        sigma = [self._width(segment, theta)[0] for segment in self.segments]
         needed = list(sigma)
         for item in self._items:
             b = self.components[item.component].widths(theta, item.lines.masses)
@@ -308,9 +164,18 @@ class AbsorberModel:
             self.alpha,
             self.components,
             self.segments,
+            coverings=self.coverings,
+            heavy=self.heavy,
             refine=self.refine * refine,
             sampled_for=theta,
         )
+
+    def _width(self, segment: SegmentTerms, theta: Array) -> tuple[float, float]:
+        """Smallest scale and reach (in σ) of the line-spread function of a segment, km/s."""
+        if segment.line_spread is not None:
+            return segment.line_spread.finest, segment.line_spread.reach / 6.0
+        sigma = segment.sigma(float(theta[segment.fwhm]))
+        return float(sigma.min()), float(sigma.max())
 
     def _prepare_grids(self, theta: Array) -> None:
         """Fine grids, padded to one width, and the instrument operator of each segment."""
@@ -321,7 +186,7 @@ class AbsorberModel:
             reference = float(segment.wavelength[0])
             low = log_velocity(segment.edges_low, reference)
             high = log_velocity(segment.edges_high, reference)
-            sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
+            sigma = self._width(segment, theta)[1]
             if self.parameters.ratio[segment.fwhm] != 0.0:
                 sigma *= _WIDEST
             grid = fine_velocity_grid(float(low.min()), float(high.max()), sigma, spacing)
@@ -335,8 +200,17 @@ class AbsorberModel:
         self._inverse = np.array(
             [np.pad(grid.inverse, (0, width - grid.size), mode="edge") for grid in self._grids]
         )
-        self._sigma: tuple[float, ...] = ()
+        self._fwhm: tuple[float, ...] = ()
         self._matrix: Any = None
+        self._bases = [
+            [(k, t, np.pad(b, (0, width - b.size))) for t, b in self._terms(segment, grid)]
+            for k, (segment, grid) in enumerate(zip(self.segments, self._grids, strict=True))
+        ]
+
+    @staticmethod
+    def _terms(segment: SegmentTerms, grid: FineGrid) -> list[tuple[int, Array]]:
+        recorded = 1.0 / grid.inverse
+        return [(term.position, term.basis(recorded)) for term in segment.distortions]
 
     def _prepare_lines(self, theta: Array) -> None:
         """The line table, and where each item and line finds its parameters."""
@@ -368,24 +242,39 @@ class AbsorberModel:
         self._b, self._temperature, self._b_turb = (
             places(name) for name in ("b", "temperature", "b_turb")
         )
+        self._stretch = np.array(
+            [
+                1.0 + (self.redshift if (z := components[i.component].redshift) is None else z)
+                for i in items
+            ]
+        )
+        none = len(self.coverings)
+        groups = [components[i.component].covering for i in items]
+        self._group = np.array([none if g is None else g for g in groups], dtype=np.intp)
         self._turbulent = bool((self._b_turb < len(self.parameters)).any())
 
     def _prepare_sums(self) -> None:
         """The sparse matrix from the rows of the line table to the slopes of each segment."""
         layout, n_items = self._layout, len(self._items)
         n = layout.width
+        n_blocks = 4 + self._turbulent + self._table.has_heavy
         entries: list[tuple[int, int, float, int, int]] = []  # row, column, ratio, kind, place
         for i, item in enumerate(self._items):
             component = self.components[item.component]
             base = item.segment * n
             entries.append((base, i, 1.0, _ONE, 0))
+            if self.segments[item.segment].distortions:
+                entries.append((base + n - 2, n_items + i, 1.0, _ONE, 0))
             width = component.width_parameters
-            for block, position, kind in [
+            targets = [
                 (0, item.column, _LOG_COLUMN),
                 (1, component.velocity, _VELOCITY),
                 (2, self.alpha, _ALPHA),
                 *((3 + j, p, _ONE) for j, p in enumerate(width)),
-            ]:
+            ]
+            if self.heavy is not None and self._table.has_heavy:
+                targets.append((n_blocks - 1, self.heavy, _ONE))
+            for block, position, kind in targets:
                 ratio = float(self.parameters.ratio[position])
                 if ratio != 0.0:
                     row = base + layout.row(item.segment, position)
@@ -398,7 +287,6 @@ class AbsorberModel:
         self._sum_place = np.array([entry[4] for entry in entries], dtype=np.intp)
         n_rows = len(self.segments) * n
         pointers = np.concatenate([[0], np.cumsum(np.bincount(rows, minlength=n_rows))])
-        n_blocks = 5 if self._turbulent else 4
         self._sum = csr_array(
             (self._sum_ratio.copy(), columns, pointers), shape=(n_rows, n_blocks * n_items)
         )
@@ -461,31 +349,29 @@ class AbsorberModel:
         theta = self.parameters.expand(free)
         self.n_evaluations += 1
         rows, _ = self._line_rows(theta, derivatives=False)
-        transmission = np.exp(-self._depths(rows[0]))
+        transmission = self._transmission(rows[0], theta)
         smooth = self._instrument(theta) @ transmission.ravel()
-        flux = (
-            self._polynomial(theta) * smooth
-            + np.append(theta, 0.0)[self._zero_places][self._segment]
+        return self._residuals(theta, self._polynomial(theta) * smooth)
+
+    def _residuals(self, theta: Array, absorbed: Array) -> Array:
+        zero = np.append(theta, 0.0)[self._zero_places][self._segment]
+        return np.concatenate(
+            [(self._data - absorbed - zero) * self._weight, self._prior_residuals(theta)]
         )
-        return np.concatenate([(self._data - flux) * self._weight, self._prior_residuals(theta)])
 
     def residuals_and_jacobian(self, free: Array) -> tuple[Array, Array]:
         """Residuals as in `residuals` and their Jacobian (n_data + n_priors, n_free)."""
         theta = self.parameters.expand(free)
         self.n_evaluations += 1
-        n_segments, n_local, n_fine = len(self.segments), self._layout.width, self._table.width
-        slopes = self._slopes(theta)
-        transmission = np.exp(-slopes[:, 0])
-        slopes[:, 1:] *= -transmission[:, None]
-        slopes[:, 0] = transmission
+        slopes = self._transmission_slopes(theta)
+        n_local = self._layout.width
+        transmission = slopes[:, 0].ravel()
         stacked = np.ascontiguousarray(slopes.transpose(0, 2, 1)).reshape(-1, n_local)
-        matrix = self._instrument(theta)
-        local: Array = matrix @ stacked  # (n_data, n_local)
+        local: Array = self._instrument(theta) @ stacked  # (n_data, n_local)
         smooth = local[:, 0].copy()
         if self._fwhm_free:
-            wider = self._by_sigma @ transmission.reshape(n_segments * n_fine)
             pixel, column, ratio = self._fwhm_target
-            local[pixel, column] += ratio * _FWHM_TO_SIGMA * wider
+            local[pixel, column] += ratio / FWHM_PER_SIGMA * (self._by_sigma @ transmission)
         polynomial = self._polynomial(theta)
         local *= polynomial[:, None]
         for basis, (pixel, column, ratio) in zip(
@@ -495,13 +381,7 @@ class AbsorberModel:
         pixel, column, ratio = self._zero_target
         local[pixel, column] += ratio
         local *= -self._weight[:, None]
-        zero = np.append(theta, 0.0)[self._zero_places][self._segment]
-        residual = np.concatenate(
-            [
-                (self._data - polynomial * smooth - zero) * self._weight,
-                self._prior_residuals(theta),
-            ]
-        )
+        residual = self._residuals(theta, polynomial * smooth)
         jacobian = np.zeros((residual.size, free.size))
         jacobian.ravel()[self._targets] = local.ravel()[self._sources]
         for row, (i, prior) in enumerate(self._priors, start=self.n_data):
@@ -521,16 +401,37 @@ class AbsorberModel:
 
     def _instrument(self, theta: Array) -> Any:
         """Block-diagonal operator (n_data, n_segments × width); rebuilt when a FWHM moved."""
-        sigma = tuple(float(theta[s.fwhm]) * _FWHM_TO_SIGMA for s in self.segments)
-        if sigma != self._sigma:
+        fwhm = tuple(float(theta[s.fwhm]) for s in self.segments)
+        if fwhm != self._fwhm:
             built = [
-                operator.matrix_with_derivative(value)
-                for operator, value in zip(self._operators, sigma, strict=True)
+                self._operator(segment, operator, value, segment.good)
+                for segment, operator, value in zip(
+                    self.segments, self._operators, fwhm, strict=True
+                )
             ]
             self._matrix = self._block_diagonal([matrix for matrix, _ in built])
             self._by_sigma = self._block_diagonal([slope for _, slope in built])
-            self._sigma = sigma
+            self._fwhm = fwhm
         return self._matrix
+
+    @staticmethod
+    def _operator(
+        segment: SegmentTerms,
+        operator: InstrumentOperator,
+        fwhm: float,
+        pixels: NDArray[np.bool_] | slice,
+    ) -> tuple[csr_array, csr_array]:
+        """Operator of a segment and its derivative to σ; zero for a tabulated profile."""
+        profile = segment.line_spread
+        if profile is None:
+            return operator.matrix_with_derivative(segment.sigma(fwhm)[pixels])
+        wavelength = segment.wavelength[pixels]
+        matrix = operator.tabulated(
+            lambda v, pixel: profile.cumulative(v, wavelength[pixel]),
+            profile.reach,
+            profile.reach,
+        )
+        return matrix, csr_array(matrix.shape)
 
     def _block_diagonal(self, blocks: Sequence[csr_array]) -> csr_array:
         width = self._table.width
@@ -540,8 +441,8 @@ class AbsorberModel:
         pointers = np.concatenate([[0], np.cumsum(counts)])
         return csr_array((data, indices, pointers), shape=(self.n_data, len(blocks) * width))
 
-    def _line_rows(self, theta: Array, *, derivatives: bool) -> tuple[Array, Array]:
-        """Rows of the line table (n_rows, n_items, width), and the column densities."""
+    def _line_rows(self, theta: Array, *, derivatives: bool) -> tuple[Array, Array | None]:
+        """Rows of the line table (n_rows, n_items, width), and the distortion velocity."""
         extended = np.append(theta, 0.0)
         masses = self._table.masses
         b_plain, b_turb = extended[self._b], extended[self._b_turb]
@@ -552,10 +453,25 @@ class AbsorberModel:
             slopes = np.where(turbulent_only, 1.0, 0.5 * DOPPLER_KMS2 / (masses * b))[None]
             if self._turbulent:
                 slopes = np.concatenate([slopes, (b_turb / b)[None]])
-        s = (1.0 + self.redshift) * (1.0 + theta[self._velocity] / C_KMS)
+        s = self._stretch * (1.0 + theta[self._velocity] / C_KMS)
         column = 10.0 ** theta[self._column]
         x = alpha_variable(theta[self.alpha])
-        return self._table.evaluate(self._inverse, s, column, b, x, slopes), column
+        velocity = self._distortion(theta)
+        inverse = self._inverse if velocity is None else self._inverse * (1.0 + velocity / C_MS)
+        margin = 0.0 if velocity is None else float(np.abs(velocity).max()) / C_MS
+        heavy = 1.0 if self.heavy is None else float(theta[self.heavy])
+        rows = self._table.evaluate(inverse, s, column, b, x, slopes, margin=margin, heavy=heavy)
+        return rows, velocity
+
+    def _distortion(self, theta: Array) -> Array | None:
+        """Distortion velocity on the fine grids (n_segments, width), m/s; None without terms."""
+        if not any(self._bases):
+            return None
+        velocity = np.zeros_like(self._inverse)
+        for terms in self._bases:
+            for k, position, basis in terms:
+                velocity[k] += theta[position] * basis
+        return velocity
 
     def _depths(self, tau: Array) -> Array:
         """Sum of the items' optical depths in each segment (n_segments, width)."""
@@ -563,17 +479,67 @@ class AbsorberModel:
         np.add.at(total, self._table.grid_of_item, tau)
         return total
 
-    def _slopes(self, theta: Array) -> Array:
-        """τ and ∂τ/∂free of each segment (n_segments, n_local, width)."""
-        rows, _ = self._line_rows(theta, derivatives=True)
+    def _covered(self, tau: Array, theta: Array) -> tuple[Array, Array]:
+        """1 − C_g + C_g e^{−τ_g} and e^{−τ_g} of each group (n_groups, n_segments, width)."""
+        depth = np.zeros((len(self.coverings), *self._inverse.shape))
+        inside = self._group < len(self.coverings)
+        np.add.at(depth, (self._group[inside], self._table.grid_of_item[inside]), tau[inside])
+        through = np.exp(-depth)
+        part = theta[list(self.coverings)][:, None, None]
+        return 1.0 - part + part * through, through
+
+    def _transmission(self, tau: Array, theta: Array) -> Array:
+        """Transmission on the fine grids (n_segments, width)."""
+        if not self.coverings:
+            return np.exp(-self._depths(tau))
+        plain = np.where((self._group == len(self.coverings))[:, None], tau, 0.0)
+        covered, _ = self._covered(tau, theta)
+        transmission: Array = np.exp(-self._depths(plain)) * covered.prod(axis=0)
+        return transmission
+
+    def _transmission_slopes(self, theta: Array) -> Array:
+        """T and ∂T/∂free of each segment (n_segments, n_local, width); see `Layout`."""
+        rows, velocity = self._line_rows(theta, derivatives=True)
+        covered = through = None
+        if self.coverings:
+            transmission = self._transmission(rows[0], theta)
+            covered, through = self._covered(rows[0], theta)
+            # −∂ln T/∂τ of an item is 1, or C_g e^{−τ_g}/(1 − C_g + C_g e^{−τ_g}) in a group
+            part = theta[list(self.coverings)][:, None, None]
+            weight = np.concatenate([part * through / covered, np.ones((1, *covered.shape[1:]))])
+            rows = rows * weight[self._group, self._table.grid_of_item]
         dalpha = theta[self.alpha] * PPM
         factors = np.array([1.0, _LN10, 0.0, 2.0 * (1.0 + dalpha) * PPM])[self._sum_kind]
         moving = self._sum_kind == _VELOCITY
         factors[moving] = 1.0 / (C_KMS + theta[self._sum_place[moving]])
         self._sum.data[:] = self._sum_ratio * factors
         n_rows, n_items, width = rows.shape
-        summed: Array = self._sum @ rows.reshape(n_rows * n_items, width)
-        return summed.reshape(len(self.segments), self._layout.width, width)
+        slopes: Array = (self._sum @ rows.reshape(n_rows * n_items, width)).reshape(
+            len(self.segments), self._layout.width, width
+        )
+        if velocity is not None:
+            self._add_distortions(slopes, velocity)
+        if not self.coverings:
+            transmission = np.exp(-slopes[:, 0])
+        slopes[:, 1:] *= -transmission[:, None]
+        slopes[:, 0] = transmission
+        if covered is not None and through is not None:
+            for g, position in enumerate(self.coverings):
+                ratio = self.parameters.ratio[position]
+                change = ratio * transmission * (through[g] - 1.0) / covered[g]
+                for k in range(len(self.segments)):
+                    row = self._layout.row_if_used(k, position)
+                    if row is not None:
+                        slopes[k, row] += change[k]
+        return slopes
+
+    def _add_distortions(self, slopes: Array, velocity: Array) -> None:
+        for terms in self._bases:
+            for k, position, basis in terms:
+                row = self._layout.row(k, position)
+                if row < self._layout.width - 1:
+                    by_shift = slopes[k, -2] / (C_MS + velocity[k])
+                    slopes[k, row] += self.parameters.ratio[position] * basis * by_shift
 
     # -- for tables and plots ---------------------------------------------------------------
 
@@ -582,30 +548,36 @@ class AbsorberModel:
         theta = self.parameters.expand(free)
         rows, _ = self._line_rows(theta, derivatives=False)
         tau = rows[0]
-        total = self._depths(tau)
+        transmission = self._transmission(tau, theta)
         predictions = []
         for k, segment in enumerate(self.segments):
             size = self._grids[k].size
             reference = float(segment.wavelength[0])
-            operator = InstrumentOperator(
+            everywhere = InstrumentOperator(
                 log_velocity(segment.edges_low, reference),
                 log_velocity(segment.edges_high, reference),
                 self._velocities[k],
-            ).matrix(theta[segment.fwhm] * _FWHM_TO_SIGMA)
+            )
+            operator = self._operator(segment, everywhere, float(theta[segment.fwhm]), slice(None))
             alone = np.zeros((len(self.components), size))
             for i, item in enumerate(self._items):
                 if item.segment == k:
                     alone[item.component] += tau[i, :size]
+            single = np.exp(-alone)
+            for c, component in enumerate(self.components):
+                if component.covering is not None:
+                    part = theta[self.coverings[component.covering]]
+                    single[c] = 1.0 - part + part * single[c]
             continuum = np.ones(segment.wavelength.size)
             if segment.continuum:
                 continuum = self._basis(segment) @ theta[list(segment.continuum)]
-            flux = continuum * (operator @ np.exp(-total[k, :size]))
+            flux = continuum * (operator[0] @ transmission[k, :size])
             if segment.zero_level is not None:
                 flux = flux + theta[segment.zero_level]
             residual = np.full(flux.size, np.nan)
             good = segment.good
             residual[good] = (segment.data[good] - flux[good]) / segment.error[good]
-            absorbed: Array = operator @ np.exp(-alone.T)
+            absorbed: Array = operator[0] @ single.T
             predictions.append(
                 SegmentPrediction(flux, continuum, residual, np.ascontiguousarray(absorbed.T))
             )

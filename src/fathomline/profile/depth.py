@@ -16,7 +16,8 @@ k_j = c/b_j the derivatives are sums over four functions of each line,
     ∂τ/∂x          A d           A d k      A d           A d a
     ∂τ/∂p          −A b'/b                  −A b'/b       −A a b'/b
 
-for a parameter p of the width with b' = ∂b_j/∂p.
+for a parameter p of the width with b' = ∂b_j/∂p. The fractions may depend linearly on one
+abundance h, φ_j = φ_j(1) + (h − 1) φ'_j, which adds a row ∂τ/∂h = Σ_j A_j φ'_j/φ_j H_j.
 
 Work is done where a line absorbs, and for all lines at once: `LineTable` lays the points of every
 line in every grid end to end in one flat array. Within 8 Doppler widths of a line the functions
@@ -79,25 +80,37 @@ class TransitionLines:
     ----------
     transition : Transition
         With its structure, or as a composite.
+    heavy_element : str, optional
+        Element whose heavier isotopes follow an abundance h relative to the tables, at the cost
+        of the lightest one.
 
     Attributes
     ----------
     name : str
     omega, strength, masses : array (n_lines,)
         Wavenumber (cm⁻¹), f φ, and mass (u) of each line.
+    by_heavy : array (n_lines,)
+        Derivative of the strength to h; zero for other elements.
     gamma, q : float
         Γ (s⁻¹) and q (cm⁻¹); 0 where they are not known.
 
     """
 
-    __slots__ = ("gamma", "masses", "name", "omega", "q", "strength")
+    __slots__ = ("by_heavy", "gamma", "masses", "name", "omega", "q", "strength")
 
-    def __init__(self, transition: Transition) -> None:
+    def __init__(self, transition: Transition, heavy_element: str | None = None) -> None:
         components = transition.components
         self.name = transition.name
         self.masses: Array = np.array([c.mass for c in components])
         self.omega: Array = np.array([c.wavenumber for c in components])
         self.strength: Array = np.array([transition.f * c.fraction for c in components])
+        self.by_heavy: Array = np.zeros(len(components))
+        if transition.element == heavy_element and transition.structure:
+            isotope = np.array([c.mass_number for c in components])
+            light = isotope == isotope.min()
+            share = self.strength[light] / self.strength[light].sum()
+            self.by_heavy[~light] = self.strength[~light]
+            self.by_heavy[light] = -self.strength[~light].sum() * share
         self.gamma = transition.gamma or 0.0
         self.q = transition.q or 0.0
 
@@ -124,6 +137,8 @@ class TransitionLines:
 
     def wings_may_merge(self, b: Array, column: float) -> bool:
         """Whether one composite line may stand for all in the wings (see the module)."""
+        if self.by_heavy.any():
+            return False
         share = self.strength / self.strength.sum()
         mean = float(share @ self.rest)
         spread = C_KMS / float(b.min()) * (self.rest / mean - 1.0)
@@ -158,13 +173,14 @@ class LineItem:
 
 
 def _rows(i: int, lines: TransitionLines, *, merged: bool) -> list[tuple[float, ...]]:
-    """Item, wavenumber, strength, Γ, q and mass of each line of an item, or of its composite."""
+    """Item, ω, f φ, Γ, q, mass and ∂(f φ)/∂h of each line of an item, or of its composite."""
     if merged:
         omega, strength, mass = lines.composite()
-        return [(i, omega, strength, lines.gamma, lines.q, mass)]
+        return [(i, omega, strength, lines.gamma, lines.q, mass, 0.0)]
+    columns = (lines.omega, lines.strength, lines.masses, lines.by_heavy)
     return [
-        (i, omega, strength, lines.gamma, lines.q, mass)
-        for omega, strength, mass in zip(lines.omega, lines.strength, lines.masses, strict=True)
+        (i, omega, strength, lines.gamma, lines.q, mass, by_heavy)
+        for omega, strength, mass, by_heavy in zip(*columns, strict=True)
     ]
 
 
@@ -197,8 +213,9 @@ class LineTable:
         wings = [_rows(i, item.lines, merged=item.merge_wings) for i, item in enumerate(items)]
         self._n_core = sum(len(block) for block in near)
         rows = [row for block in (*near, *wings) for row in block]
-        table = np.array([row[1:] for row in rows], dtype=np.float64).reshape(-1, 5).T
-        self._omega, self._strength, gamma, self._q, self.masses = table
+        table = np.array([row[1:] for row in rows], dtype=np.float64).reshape(-1, 6).T
+        self._omega, self._strength, gamma, self._q, self.masses, self._by_heavy = table
+        self.has_heavy = bool(self._by_heavy.any())
         self._damping = gamma * _DAMPING
         self.item: Indices = np.array([row[0] for row in rows], dtype=np.intp)
         self._first_line = np.searchsorted(self.item[: self._n_core], np.arange(self.n_items))
@@ -233,6 +250,7 @@ class LineTable:
         slopes: Array | None = None,
         *,
         margin: float = 0.0,
+        heavy: float = 1.0,
     ) -> Array:
         """Optical depth, and with `slopes` its derivatives, of every item on its grid.
 
@@ -250,19 +268,23 @@ class LineTable:
             ∂b/∂p.
         margin : float
             Largest relative distance of `inverse` from the uniform grids.
+        heavy : float
+            Abundance h of heavier isotopes relative to the tables.
 
         Returns
         -------
         array (1, n_items, width), or (3 + n_width_parameters, n_items, width) with `slopes`
-            τ; ∂τ/∂ln s (also the derivative to a shift of the wavelength scale); ∂τ/∂x; and ∂τ/∂p
-            for each parameter p of the width. Zero beyond the size of a grid.
+            τ; ∂τ/∂ln s (also the derivative to a shift of the wavelength scale); ∂τ/∂x; ∂τ/∂p for
+            each parameter p of the width; and, when some line depends on h, ∂τ/∂h. Zero beyond the
+            size of a grid.
 
         """
         n_core, item = self._n_core, self.item
         rest = 1e8 / (self._omega + self._q * x)
         k = C_KMS / b
         a = self._damping * rest / b
-        amplitude = DEPTH_CONSTANT * column[item] * self._strength * rest / b
+        unit = DEPTH_CONSTANT * column[item] * rest / b
+        amplitude = unit * (self._strength + (heavy - 1.0) * self._by_heavy)
         observed = rest * s[item]
         first, last = self._core_range(
             np.log(observed[:n_core]), CORE / k[:n_core] * 1.01 + margin, a[:n_core] > SERIES_A
@@ -285,6 +307,8 @@ class LineTable:
         columns = [k * observed, k, amplitude, a]
         if slopes is not None:
             columns += [amplitude * k, amplitude * a, -rest * self._q / 1e8, *(-slopes / b)]
+            if self.has_heavy:
+                columns.append(unit * self._by_heavy)
         spread = np.repeat(np.array(columns)[:, which], count, axis=1)
         u = spread[0] * inverse.ravel()[source] - spread[1]
         functions = np.empty((1 if slopes is None else 4, total))
@@ -305,10 +329,13 @@ class LineTable:
         if len(functions) == 1:
             return summed(tau)[None]
         _, _, amplitude, _, steep, damped, by_x, *by_width = spread
+        by_heavy = by_width.pop() if self.has_heavy else None
         shifted = amplitude * functions[2]
         spread_out = tau + shifted
         spread_out += damped * functions[3]
         moved = steep * functions[1]
         rows = [summed(tau), summed(shifted + moved), summed((spread_out + moved) * by_x)]
         rows += [summed(spread_out * factor) for factor in by_width]
+        if by_heavy is not None:
+            rows.append(summed(by_heavy * functions[0]))
         return np.array(rows)

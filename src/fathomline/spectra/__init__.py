@@ -4,7 +4,12 @@ from __future__ import annotations
 
 from fathomline.spectra.continuum import local_level, spectrum_level
 from fathomline.spectra.frames import barycentric_velocity, to_barycentric
-from fathomline.spectra.line_spread import GaussianLineSpread, LineSpread
+from fathomline.spectra.line_spread import (
+    FWHM_PER_SIGMA,
+    GaussianLineSpread,
+    LineSpread,
+    TabulatedLineSpread,
+)
 from fathomline.spectra.media import AIR_FORMULAS, air_to_vacuum, vacuum_to_air
 from fathomline.spectra.read import FRAMES, MEDIA, read_spectrum
 from fathomline.spectra.reading import Reading
@@ -17,12 +22,14 @@ __all__ = [
     "AIR_FORMULAS",
     "ALLOWED_UNITS",
     "FRAMES",
+    "FWHM_PER_SIGMA",
     "MEDIA",
     "GaussianLineSpread",
     "LineSpread",
     "Reading",
     "Spectrum",
     "SpectrumSummary",
+    "TabulatedLineSpread",
     "air_to_vacuum",
     "barycentric_velocity",
     "local_level",
