@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from fathomline.profile import LineTable
-from support import ridders, small_model
+from support import everything_model, ridders, small_model
 
 # Steps: about a tenth of the distance over which the model changes its shape
 STEPS = {
@@ -19,6 +19,16 @@ STEPS = {
     "F": 0.05,
     "c": 0.1,
     "z": 0.1,
+    "heavy": 0.2,
+    "covering": 0.05,
+    "shift": 200.0,
+    "slope": 200.0,
+    "sawtooth": 200.0,
+    "fwhm0": 0.2,
+    "fwhm1": 0.2,
+    "blendv": 0.5,
+    "blendb": 0.5,
+    "blendN": 0.05,
 }
 
 
@@ -26,10 +36,17 @@ def step_of(name: str) -> float:
     return STEPS.get(name, STEPS.get(name[0], 0.1))
 
 
-@pytest.mark.parametrize("structure", ["isotopic", "composite"])
+MODELS = {
+    "isotopic": lambda: small_model(structure="isotopic"),
+    "composite": lambda: small_model(structure="composite"),
+    "everything": everything_model,
+}
+
+
+@pytest.mark.parametrize("kind", MODELS)
 @pytest.mark.parametrize("seed", [1, 2])
-def test_each_entry_agrees_with_an_adaptive_derivative(structure, seed, monkeypatch):
-    model = small_model(structure=structure)
+def test_each_entry_agrees_with_an_adaptive_derivative(kind, seed, monkeypatch):
+    model = MODELS[kind]()
     rng = np.random.default_rng(seed)
     x = model.parameters.start * (1.0 + 0.02 * rng.standard_normal(model.parameters.start.size))
     calls = []

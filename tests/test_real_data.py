@@ -79,7 +79,7 @@ def fisher_sigma(measurement: Measurement) -> dict[str, float]:
     for segment, prediction in zip(model.segments, measurement.predictions, strict=True):
         transition = measurement.built.transitions[segment.region]
         edges = np.append(segment.edges_low, segment.edges_high[-1])
-        centre = segment.rest * (1.0 + measurement.job.absorber.redshift)
+        centre = segment.centre
         velocity = C_KMS * (segment.wavelength / centre - 1.0)
 
         def transmission(
@@ -177,7 +177,7 @@ def test_residuals_have_no_structure(name, aligned):
     result, _ = measured(name, aligned)
     velocity, residual = [], []
     for segment, prediction in zip(result.built.model.segments, result.predictions, strict=True):
-        centre = segment.rest * (1.0 + result.job.absorber.redshift)
+        centre = segment.centre
         good = segment.good
         r = prediction.residual
         velocity.append(C_KMS * (segment.wavelength / centre - 1.0)[good])

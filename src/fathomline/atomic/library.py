@@ -37,6 +37,8 @@ class AtomicData:
     telluric : tuple of TelluricRange
     digests : dict
         SHA-256 of each table, by file name, for the record of a measurement.
+    changes : tuple of str
+        Departures from the tables, one sentence each.
 
     """
 
@@ -45,6 +47,7 @@ class AtomicData:
     isotopes: tuple[Isotope, ...]
     telluric: tuple[TelluricRange, ...]
     digests: dict[str, str]
+    changes: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         by_name: dict[str, Transition] = {}

@@ -1,8 +1,9 @@
 """From a job to the model that is fitted: spectra are read, regions cut, parameters named.
 
 Parameters are named as references in a job name them: ``alpha.dalpha``, ``component[2].b``,
-``component[2].logN["Fe II"]``, ``spectrum[1].fwhm``, ``region[3].zero_level``, and, for the
-polynomials, ``region[3].continuum["red"][1]``. Numbers count from 1.
+``component[2].logN["Fe II"]``, ``blend[1].b``, ``spectrum[1].fwhm``, ``region[3].zero_level``,
+``distortion[1].value``, ``covering[1].value``, ``atomic.heavy_magnesium``, and, for polynomials,
+``region[3].continuum["red"][1]``. Numbers count from 1.
 """
 
 from __future__ import annotations
@@ -14,15 +15,18 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from fathomline.atomic import AtomicData, Transition, load_atomic_data
+from fathomline.atomic import AtomicData, Transition
 from fathomline.constants import C_KMS, DOPPLER_KMS2
 from fathomline.errors import AtomicDataError, JobError, SpectrumError
+from fathomline.job.absorption_tables import Blend, Component, Region
+from fathomline.job.inputs import distortion_bases, line_spread
+from fathomline.job.instrument_tables import Spectrum as SpectrumTable
 from fathomline.job.number import QUANTITIES, Number, Reference
-from fathomline.job.schema import Component, Job, Region
-from fathomline.job.schema import Spectrum as SpectrumTable
+from fathomline.job.schema import Job
 from fathomline.model import (
     AbsorberModel,
     ComponentTerms,
+    DistortionTerm,
     Parameter,
     ParameterSet,
     Prior,
@@ -30,14 +34,17 @@ from fathomline.model import (
     Tie,
 )
 from fathomline.profile import TransitionLines
-from fathomline.spectra import GaussianLineSpread, Spectrum, local_level, read_spectrum
+from fathomline.spectra import Spectrum, TabulatedLineSpread, local_level
 
-__all__ = ["ALPHA", "BuiltModel", "build_model", "load_atoms", "load_spectra", "load_spectrum"]
+__all__ = ["ALPHA", "BuiltModel", "build_model"]
+
+Array = NDArray[np.float64]
 
 ALPHA = "alpha.dalpha"
 """Name of Δα/α (ppm) among the parameters."""
 
 _NEGLIGIBLE_DEPTH = 1e-5  # optical depth below which a line is left out of a region
+_BLEND_REACH = 100.0  # km/s that a blend may move from its redshift
 _GROWTH = 1.0  # dex that a column density may gain during the fit before that matters
 
 
@@ -64,71 +71,6 @@ class BuiltModel:
     transitions: tuple[Transition, ...]
 
 
-def load_atoms(job: Job) -> AtomicData:
-    """The transition tables that the job asks for."""
-    return load_atomic_data(job.atomic.structure)
-
-
-def _line_spread(table: SpectrumTable, job: Job, index: int) -> GaussianLineSpread:
-    resolution = table.resolution
-    if resolution.R is not None:
-        return GaussianLineSpread.from_resolving_power(resolution.R, resolution.error)
-    return GaussianLineSpread(
-        job.start_values()[Reference("spectrum", index, "fwhm")], resolution.error
-    )
-
-
-def load_spectrum(job: Job, index: int) -> Spectrum:
-    """Read spectrum `index` (from 0) of a job.
-
-    Raises
-    ------
-    SpectrumError
-        The file cannot be read.
-
-    """
-    table = job.spectra[index]
-    return read_spectrum(
-        job.spectrum_path(index),
-        columns=_columns(table),
-        unit=table.unit,
-        medium=table.medium,
-        frame=table.frame,
-        velocity=table.berv,
-        lsf=_line_spread(table, job, index),
-        name=table.id,
-        error_file=job.error_path(index),
-        continuum_file=job.continuum_path(index),
-    )
-
-
-def load_spectra(job: Job) -> tuple[Spectrum, ...]:
-    """Read the spectra of a job.
-
-    Raises
-    ------
-    JobError
-        One message for each file that cannot be read, with the line of the job.
-
-    """
-    spectra: list[Spectrum] = []
-    faults: list[str] = []
-    for index in range(len(job.spectra)):
-        try:
-            spectra.append(load_spectrum(job, index))
-        except SpectrumError as fault:
-            faults.append(f"{job.locate('spectrum', index, 'file')}: {fault}")
-    if faults:
-        raise JobError(faults)
-    return tuple(spectra)
-
-
-def _columns(table: SpectrumTable) -> dict[str, str] | None:
-    if table.columns is None:
-        return None
-    return {key: name for key, name in table.columns.model_dump().items() if name is not None}
-
-
 class _Builder:
     """Collects parameters, segments and faults."""
 
@@ -137,6 +79,9 @@ class _Builder:
         self.start = job.start_values()
         self.parameters: list[Parameter] = []
         self.faults: list[str] = []
+        self.absorptions: list[_Absorption] = []
+        self.distortions: list[DistortionTerm] = []
+        self.heavy_element: str | None = None
         self.bounds = {s.name: s.bounds() for s in spectra}
         self.used: dict[str, NDArray[np.intp]] = {
             s.name: np.full(len(s), -1, dtype=np.intp) for s in spectra
@@ -169,6 +114,46 @@ class _Builder:
             high = bounds[1] if number.max is None else high
         value = 0.0 if number.value is None else number.value
         return self.put(Parameter(name, value, unit, low, high, fixed=number.fixed, prior=prior))
+
+    def heavy_magnesium(self) -> int | None:
+        """The abundance of heavy magnesium relative to terrestrial, where it is not 1 and fixed."""
+        atomic = self.job.atomic
+        number = atomic.heavy_magnesium
+        if number.fixed and number.value == 1.0:
+            return None
+        self.heavy_element = "Mg"
+        prior = None
+        if atomic.heavy_magnesium_sigma is not None and number.value is not None:
+            prior = Prior(number.value, atomic.heavy_magnesium_sigma)
+        return self.number("atomic.heavy_magnesium", number, "heavy_magnesium", prior=prior)
+
+    def put_distortions(self) -> None:
+        """One parameter for each distortion term, with its prior."""
+        bases = distortion_bases(self.job)
+        for i, (table, basis) in enumerate(zip(self.job.distortions, bases, strict=True)):
+            prior = Prior(table.value, table.sigma) if table.has_prior else None
+            position = self.put(
+                Parameter(
+                    f"distortion[{i + 1}].value",
+                    table.value,
+                    table.unit,
+                    fixed=not table.is_free,
+                    prior=prior,
+                )
+            )
+            self.distortions.append(DistortionTerm(position, basis))
+
+    def check_blends(self, segments: Sequence[SegmentTerms]) -> None:
+        """A blend that absorbs in no region cannot be fitted."""
+        used = {key for segment in segments for key, _ in segment.lines}
+        for k in range(len(self.job.blends)):
+            if f"blend {k + 1}" not in used and not self.faults:
+                self.fault(
+                    f"[[blend]] {k + 1}: absorbs in no region; remove it, or check its line, "
+                    "redshift and velocity",
+                    "blend",
+                    k,
+                )
 
     # -- components -------------------------------------------------------------------------
 
@@ -203,6 +188,7 @@ class _Builder:
             value = getattr(table, quantity)
             if value is not None:
                 width[quantity] = self.number(f"{name}.{quantity}", value, quantity)
+        groups = [g for g, group in enumerate(self.job.coverings) if k + 1 in group.components]
         return ComponentTerms(
             velocity=self.number(
                 f"{name}.velocity", table.velocity, "velocity", bounds=(low, high)
@@ -211,8 +197,54 @@ class _Builder:
                 ion: self.number(f'{name}.logN["{ion}"]', value, "logN")
                 for ion, value in table.logN.items()
             },
+            covering=groups[0] if groups else None,
             **width,
         )
+
+    def blend(self, k: int, table: Blend) -> _Absorption | None:
+        """The component of a blend, with its lines."""
+        name, key = f"blend[{k + 1}]", f"blend {k + 1}"
+        if table.wavelength is not None:
+            lines = [_unknown_line(table.wavelength)]
+            redshift = 0.0
+        else:
+            redshift = table.redshift or 0.0
+            try:
+                lines = [self.atoms[transition] for transition in table.transitions]
+            except AtomicDataError as error:
+                which = "line" if table.line is not None else "lines"
+                self.fault(f"[[blend]] {k + 1}: {error}", "blend", k, which)
+                return None
+        terms = ComponentTerms(
+            velocity=self.number(
+                f"{name}.velocity", table.velocity, "velocity", bounds=(-_BLEND_REACH, _BLEND_REACH)
+            ),
+            log_columns={key: self.number(f"{name}.logN", table.logN, "logN")},
+            b=self.number(f"{name}.b", table.b, "b"),
+            redshift=redshift,
+        )
+        start = [self.start[Reference("blend", k, q)] for q in ("velocity", "b", "logN")]
+        return _Absorption(terms, key, lines, redshift, *start)
+
+    def absorber(self, k: int, terms: ComponentTerms, table: Component) -> list[_Absorption]:
+        """What a component absorbs, ion by ion."""
+        z = self.job.absorber.redshift
+        velocity = self.start[Reference("component", k, "velocity")]
+        found = []
+        for ion in table.logN:
+            lines = [line for line in self.atoms.find(ion=ion, extra=True) if line.ground]
+            if not lines:
+                continue
+            if table.b is not None:
+                b = self.start[Reference("component", k, "b")]
+            else:
+                temperature = self.start[Reference("component", k, "temperature")]
+                b = math.sqrt(DOPPLER_KMS2 * temperature / lines[0].mass)
+                if table.b_turb is not None:
+                    b = math.hypot(b, self.start[Reference("component", k, "b_turb")])
+            column = self.start[Reference("component", k, "logN", ion)]
+            found.append(_Absorption(terms, ion, lines, z, velocity, b, column))
+        return found
 
     # -- regions ----------------------------------------------------------------------------
 
@@ -222,7 +254,7 @@ class _Builder:
         except AtomicDataError as error:
             self.fault(f"[[region]] {i + 1}: {error}", "region", i, "transition")
             return None
-        if transition.q is None:
+        if transition.q is None and region.redshift is None:
             self.fault(
                 f"[[region]] {i + 1}: {transition.name} has no sensitivity coefficient q, so it "
                 "cannot take part in a measurement; `fathomline lines` lists those that can",
@@ -236,7 +268,8 @@ class _Builder:
     def segments(
         self, i: int, region: Region, transition: Transition, fwhm: Mapping[str, int]
     ) -> list[SegmentTerms]:
-        centre = transition.observed_wavelength(self.job.absorber.redshift)
+        redshift = self.job.absorber.redshift if region.redshift is None else region.redshift
+        centre = transition.observed_wavelength(redshift)
         low, high = (centre * (1.0 + v / C_KMS) for v in region.window)
         named = None if region.spectra is None else set(region.spectra)
         found, reasons = [], []
@@ -271,6 +304,7 @@ class _Builder:
                 good,
                 fwhm[spectrum.name],
                 zero_level,
+                centre,
             )
             if segment is not None:
                 found.append(segment)
@@ -296,6 +330,7 @@ class _Builder:
         good: NDArray[np.bool_],
         fwhm: int,
         zero_level: int | None,
+        centre: float,
     ) -> SegmentTerms | None:
         owner = self.used[spectrum.name][cut]
         shared = np.unique(owner[(owner >= 0) & good])
@@ -353,54 +388,68 @@ class _Builder:
             fwhm=fwhm,
             window=region.window,
             rest=transition.wavelength,
+            centre=centre,
+            distortions=tuple(
+                term
+                for term, table in zip(self.distortions, self.job.distortions, strict=True)
+                if spectrum.name in table.spectra
+                and (table.regions is None or i + 1 in table.regions)
+            ),
+            fwhm_slope=self.fwhm_slope(spectrum.name, spectrum.wavelength[cut]),
+            line_spread=spectrum.lsf if isinstance(spectrum.lsf, TabulatedLineSpread) else None,
         )
 
-    def lines(
-        self, own: Transition, wavelength: NDArray[np.float64]
-    ) -> tuple[tuple[str, TransitionLines], ...]:
-        """Every line of the components' ions that can absorb at these wavelengths."""
-        z = self.job.absorber.redshift
-        out = {own.name: (own.ion, TransitionLines(own))}
-        components = list(enumerate(self.job.components))
-        for ion in dict.fromkeys(ion for _, c in components for ion in c.logN):
-            for line in self.atoms.find(ion=ion, extra=True):
-                if line.name in out or not line.ground:
+    def fwhm_slope(self, name: str, wavelength: Array) -> Array | None:
+        """What the FWHM of a spectrum gains with wavelength (n,), km/s."""
+        resolution = next(table.resolution for table in self.job.spectra if table.id == name)
+        if resolution.slope is None or resolution.pivot is None:
+            return None
+        gain: Array = resolution.slope * (wavelength - resolution.pivot) / 1000.0
+        return gain
+
+    def lines(self, own: Transition, wavelength: Array) -> tuple[tuple[str, TransitionLines], ...]:
+        """Every line of the components and blends that can absorb at these wavelengths."""
+        found: dict[tuple[str, str], TransitionLines] = {}
+        for absorption in self.absorptions:
+            for line in absorption.lines:
+                key = (absorption.key, line.name)
+                if key in found:
                     continue
-                terms = TransitionLines(line)
-                centre = line.observed_wavelength(z)
-                for k, component in components:
-                    if ion in component.logN and self._reaches(
-                        k, component, ion, line.mass, terms, centre, wavelength
-                    ):
-                        out[line.name] = (ion, terms)
-                        break
-        return tuple(out.values())
+                terms = TransitionLines(line, self.heavy_element)
+                if (absorption.key == own.ion and line is own) or absorption.reaches(
+                    line, terms, wavelength
+                ):
+                    found[key] = terms
+        return tuple((key, terms) for (key, _), terms in found.items())
 
-    def _reaches(
-        self,
-        k: int,
-        component: Component,
-        ion: str,
-        mass: float,
-        terms: TransitionLines,
-        centre: float,
-        wavelength: NDArray[np.float64],
-    ) -> bool:
-        def value(quantity: str, ion: str | None = None) -> float:
-            return self.start[Reference("component", k, quantity, ion)]
 
-        if component.b is not None:
-            b = value("b")
-        else:
-            b = math.sqrt(DOPPLER_KMS2 * value("temperature") / mass)
-            if component.b_turb is not None:
-                b = math.hypot(b, value("b_turb"))
-        column = 10.0 ** (value("logN", ion) + _GROWTH)
-        reach = terms.reach(b, column, _NEGLIGIBLE_DEPTH) + 10.0 * b
-        place = centre * (1.0 + value("velocity") / C_KMS)
+@dataclass(frozen=True)
+class _Absorption:
+    """Start values of one ion of a component, or of a blend, and the lines it may have."""
+
+    terms: ComponentTerms
+    key: str
+    lines: list[Transition]
+    redshift: float
+    velocity: float
+    b: float
+    log_column: float
+
+    def reaches(self, line: Transition, terms: TransitionLines, wavelength: Array) -> bool:
+        """Whether the line can absorb at some of the wavelengths, also after it has grown."""
+        column = 10.0 ** (self.log_column + _GROWTH)
+        reach = terms.reach(self.b, column, _NEGLIGIBLE_DEPTH) + 10.0 * self.b
+        place = line.observed_wavelength(self.redshift) * (1.0 + self.velocity / C_KMS)
         return bool(
             wavelength[0] * (1.0 - reach / C_KMS) <= place <= wavelength[-1] * (1.0 + reach / C_KMS)
         )
+
+
+def _unknown_line(wavelength: float) -> Transition:
+    """A line of which only the observed wavelength is known; its column density is N f."""
+    return Transition(
+        "unknown", f"{wavelength:g}", "", 1.0, 1e8 / wavelength, None, 1.0, None, None, None
+    )
 
 
 def build_model(job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> BuiltModel:
@@ -416,9 +465,20 @@ def build_model(job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> Bui
     """
     builder = _Builder(job, spectra, atoms)
     alpha = builder.number(ALPHA, job.alpha.dalpha, "dalpha")
+    heavy = builder.heavy_magnesium()
     fwhm = {table.id: _put_fwhm(builder, i, table) for i, table in enumerate(job.spectra)}
+    builder.put_distortions()
     components = [
         builder.component(k, table, job.regions) for k, table in enumerate(job.components)
+    ]
+    for k, (terms, table) in enumerate(zip(components, job.components, strict=True)):
+        builder.absorptions += builder.absorber(k, terms, table)
+    blends = [b for k, t in enumerate(job.blends) if (b := builder.blend(k, t)) is not None]
+    builder.absorptions += blends
+    components += [blend.terms for blend in blends]
+    coverings = [
+        builder.number(f"covering[{g + 1}].value", group.value, "covering")
+        for g, group in enumerate(job.coverings)
     ]
     segments: list[SegmentTerms] = []
     transitions: list[Transition] = []
@@ -427,10 +487,17 @@ def build_model(job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> Bui
         if transition is not None:
             transitions.append(transition)
             segments += builder.segments(i, region, transition, fwhm)
+    builder.check_blends(segments)
     if builder.faults:
         raise JobError(builder.faults)
     model = AbsorberModel(
-        job.absorber.redshift, ParameterSet(builder.parameters), alpha, components, segments
+        job.absorber.redshift,
+        ParameterSet(builder.parameters),
+        alpha,
+        components,
+        segments,
+        coverings=coverings,
+        heavy=heavy,
     )
     return BuiltModel(job, tuple(spectra), atoms, model, tuple(transitions))
 
@@ -439,7 +506,7 @@ def _put_fwhm(builder: _Builder, i: int, table: SpectrumTable) -> int:
     name = f"spectrum[{i + 1}].fwhm"
     resolution = table.resolution
     if resolution.fwhm is None:
-        value = _line_spread(table, builder.job, i).fwhm
+        value = line_spread(resolution, builder.job, i).fwhm
         return builder.put(Parameter(name, value, "km/s", fixed=True))
     prior = None
     if resolution.error is not None and resolution.fwhm.is_free:

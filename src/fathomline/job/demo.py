@@ -6,7 +6,7 @@ from importlib.resources import files
 from pathlib import Path
 
 from fathomline.errors import ResultError
-from fathomline.job.building import load_atoms
+from fathomline.job.inputs import load_atoms
 from fathomline.job.reading import parse_job
 from fathomline.job.simulation import Noise, simulate, synthetic_grid
 from fathomline.job.synthesis import Cloud

@@ -15,8 +15,9 @@ from numpy.typing import NDArray
 
 import fathomline
 from fathomline.fit import CAUTIONS, FLAGS, FitResult, FitSettings, fit_model
-from fathomline.job.building import ALPHA, BuiltModel, build_model, load_atoms, load_spectra
+from fathomline.job.building import ALPHA, BuiltModel, build_model
 from fathomline.job.digest import job_digest
+from fathomline.job.inputs import load_atoms, load_spectra
 from fathomline.job.schema import Job
 from fathomline.model import SegmentPrediction
 

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from fathomline.atomic import AtomicData, Transition
 from fathomline.constants import C_KMS
 from fathomline.errors import JobError, ResultError
-from fathomline.job.building import load_atoms, load_spectrum
+from fathomline.job.inputs import load_atoms, load_spectrum
 from fathomline.job.number import Reference
 from fathomline.job.schema import Component, Job
 from fathomline.job.schema import Spectrum as SpectrumTable

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from fathomline.constants import DOPPLER_KMS2
+from fathomline.constants import C_KMS, DOPPLER_KMS2
 from fathomline.profile import TransitionLines
 from fathomline.spectra import FWHM_PER_SIGMA, TabulatedLineSpread
 
@@ -99,8 +99,8 @@ class SegmentTerms:
         Limits of the region in km/s, for plots.
     rest : float
         Composite rest wavelength of the region's transition, Å.
-    redshift : float or None
-        Zero of the velocities of the window; None for that of the absorber.
+    centre : float
+        Observed wavelength at velocity 0, Å.
     distortions : tuple of DistortionTerm
     fwhm_slope : array (n,), optional
         What the FWHM at each pixel exceeds the parameter by, km/s.
@@ -124,10 +124,16 @@ class SegmentTerms:
     fwhm: int
     window: tuple[float, float]
     rest: float
-    redshift: float | None = None
+    centre: float
     distortions: tuple[DistortionTerm, ...] = ()
     fwhm_slope: Array | None = None
     line_spread: TabulatedLineSpread | None = None
+
+    @property
+    def velocity(self) -> Array:
+        """Velocity of the pixel centres (n,), km/s: c (λ/centre − 1)."""
+        velocity: Array = C_KMS * (self.wavelength / self.centre - 1.0)
+        return velocity
 
     def sigma(self, fwhm: float) -> Array:
         """Standard deviation of the line-spread function at each pixel (n,), km/s."""

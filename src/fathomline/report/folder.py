@@ -143,17 +143,14 @@ def _write_model(measurement: Measurement, path: Path) -> None:
     """One binary table per region and spectrum."""
     from astropy.io import fits
 
-    redshift = measurement.job.absorber.redshift
     tables: list[Any] = [fits.PrimaryHDU()]
     for segment, prediction in zip(
         measurement.built.model.segments, measurement.predictions, strict=True
     ):
-        centre = segment.rest * (1.0 + redshift)
-        velocity = 299_792.458 * (segment.wavelength / centre - 1.0)
         table = fits.BinTableHDU.from_columns(
             [
                 fits.Column("WAVELENGTH", "D", unit="Angstrom", array=segment.wavelength),
-                fits.Column("VELOCITY", "D", unit="km/s", array=velocity),
+                fits.Column("VELOCITY", "D", unit="km/s", array=segment.velocity),
                 fits.Column("DATA", "D", array=segment.data),
                 fits.Column("ERROR", "D", array=segment.error),
                 fits.Column("FITTED", "L", array=segment.good),
@@ -171,7 +168,7 @@ def _write_model(measurement: Measurement, path: Path) -> None:
         table.header["TRANS"] = (segment.name, "transition of the region")
         table.header["SPECTRUM"] = (segment.spectrum, "id of the spectrum")
         table.header["RESTWAV"] = (segment.rest, "[Angstrom] composite rest wavelength, vacuum")
-        table.header["ZABS"] = (redshift, "redshift of zero velocity")
+        table.header["ZABS"] = (segment.centre / segment.rest - 1.0, "redshift of zero velocity")
         table.header["COMMENT"] = "DATA, ERROR, MODEL, CONTINUUM: in units of the file's continuum"
         table.header["COMMENT"] = "RESIDUAL: (DATA - MODEL)/ERROR, nan where not FITTED"
         table.header["COMMENT"] = "COMPONENTS: transmission of each component alone"

@@ -96,14 +96,14 @@ def measurement_panels(measurement: Measurement) -> list[Panel]:
     counts = [s.region for s in model.segments]
     panels = []
     for segment, prediction in zip(model.segments, measurement.predictions, strict=True):
-        centre = segment.rest * (1.0 + model.redshift)
+        centre = segment.centre
         ion = segment.name.rpartition(" ")[0]
         mine = [(k, c) for k, c in enumerate(model.components, start=1) if ion in c.log_columns]
         panels.append(
             Panel(
                 segment,
                 prediction,
-                velocity=C_KMS * (segment.wavelength / centre - 1.0),
+                velocity=segment.velocity,
                 low=C_KMS * (segment.edges_low / centre - 1.0),
                 high=C_KMS * (segment.edges_high / centre - 1.0),
                 several=counts.count(segment.region) > 1,

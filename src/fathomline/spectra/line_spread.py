@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -16,8 +17,15 @@ from numpy.typing import NDArray
 
 from fathomline.constants import C_KMS
 from fathomline.errors import SpectrumError
+from fathomline.spectra.read_text import read_text_table
 
-__all__ = ["FWHM_PER_SIGMA", "GaussianLineSpread", "LineSpread", "TabulatedLineSpread"]
+__all__ = [
+    "FWHM_PER_SIGMA",
+    "GaussianLineSpread",
+    "LineSpread",
+    "TabulatedLineSpread",
+    "read_line_spread",
+]
 
 FWHM_PER_SIGMA: float = 2.0 * math.sqrt(2.0 * math.log(2.0))
 """Full width at half maximum of a Gaussian of unit standard deviation."""
@@ -223,3 +231,53 @@ class TabulatedLineSpread:
 
 # every line-spread function that a spectrum may carry
 LineSpread: TypeAlias = GaussianLineSpread | TabulatedLineSpread
+
+
+def read_line_spread(path: str | Path) -> TabulatedLineSpread:
+    """Read a tabulated line-spread function.
+
+    Parameters
+    ----------
+    path
+        ECSV, CSV or text with named columns: ``velocity`` (recorded minus true velocity, km/s) and
+        either one column ``profile``, or one column for each wavelength whose name is that
+        wavelength in Å (for instance ``4500``).
+
+    Raises
+    ------
+    SpectrumError
+        If the file is missing or malformed; the message names the file.
+
+    """
+    path = Path(path)
+    where = str(path)
+    if not path.is_file():
+        raise SpectrumError(f"{where}: there is no such file; expected a line-spread table")
+    table = read_text_table(path, where)
+    names = table.names
+    if names is None or "velocity" not in names or len(names) < 2:
+        raise SpectrumError(
+            f"{where}: expected named columns 'velocity' and 'profile', or 'velocity' and one "
+            f"column for each wavelength in Å; found {', '.join(names or ['no names'])}"
+        )
+    others = [name for name in names if name != "velocity"]
+    if others == ["profile"]:
+        wavelengths = [1.0]
+    else:
+        try:
+            wavelengths = [float(name) for name in others]
+        except ValueError:
+            raise SpectrumError(
+                f"{where}: expected one column 'profile', or columns named by their wavelength in "
+                f"Å; found {', '.join(others)}"
+            ) from None
+    order = np.argsort(wavelengths)
+    columns = [table.numbers(names.index(others[i]), where) for i in order]
+    try:
+        return TabulatedLineSpread(
+            table.numbers(names.index("velocity"), where),
+            np.array(columns),
+            np.array(wavelengths)[order],
+        )
+    except SpectrumError as fault:
+        raise SpectrumError(f"{where}: {fault}") from None
