@@ -41,6 +41,8 @@ class Covariance:
         Why a parameter has no error, by name.
     condition : float
         Condition number of the scaled Jacobian.
+    degenerate : tuple of tuple of str
+        Sets of parameters that the data only constrain together.
 
     """
 
@@ -48,6 +50,7 @@ class Covariance:
     matrix: Array
     reasons: dict[str, str]
     condition: float
+    degenerate: tuple[tuple[str, ...], ...] = ()
 
     def sigma(self, name: str) -> float | None:
         """1σ error of a parameter; None when `reasons` says why there is none."""
@@ -94,6 +97,9 @@ def covariance_from_jacobian(
     singular, vt = np.linalg.svd(np.linalg.qr(jacobian[:, free] / norm, mode="r"))[1:]
     null = singular < _SINGULAR_RATIO * singular[0]
     lost = (vt[null] ** 2).sum(axis=0) > _SHARE**2
+    degenerate = tuple(
+        tuple(names[i] for i in free[np.abs(direction) > _SHARE]) for direction in vt[null]
+    )
     for i in free[lost]:
         reasons[names[i]] = SINGULAR
     inverse = (vt[~null].T / singular[~null] ** 2) @ vt[~null]
@@ -102,4 +108,4 @@ def covariance_from_jacobian(
     block[:, lost] = 0.0
     matrix[np.ix_(free, free)] = block
     condition = float(singular[0] / max(singular[-1], np.finfo(float).tiny))
-    return Covariance(names, matrix, reasons, condition)
+    return Covariance(names, matrix, reasons, condition, degenerate)

@@ -36,7 +36,7 @@ from fathomline.model import (
 from fathomline.profile import TransitionLines
 from fathomline.spectra import Spectrum, TabulatedLineSpread, local_level
 
-__all__ = ["ALPHA", "BuiltModel", "build_model"]
+__all__ = ["ALPHA", "BuiltModel", "build_model", "unknown_line"]
 
 Array = NDArray[np.float64]
 
@@ -205,7 +205,7 @@ class _Builder:
         """The component of a blend, with its lines."""
         name, key = f"blend[{k + 1}]", f"blend {k + 1}"
         if table.wavelength is not None:
-            lines = [_unknown_line(table.wavelength)]
+            lines = [unknown_line(table.wavelength)]
             redshift = 0.0
         else:
             redshift = table.redshift or 0.0
@@ -445,7 +445,7 @@ class _Absorption:
         )
 
 
-def _unknown_line(wavelength: float) -> Transition:
+def unknown_line(wavelength: float) -> Transition:
     """A line of which only the observed wavelength is known; its column density is N f."""
     return Transition(
         "unknown", f"{wavelength:g}", "", 1.0, 1e8 / wavelength, None, 1.0, None, None, None

@@ -19,7 +19,8 @@ from fathomline.job.building import ALPHA, BuiltModel, build_model
 from fathomline.job.digest import job_digest
 from fathomline.job.inputs import load_atoms, load_spectra
 from fathomline.job.schema import Job
-from fathomline.model import SegmentPrediction
+from fathomline.model import SegmentPrediction, SegmentTerms
+from fathomline.spectra import noise_correlation
 
 __all__ = ["STAT_ONLY", "Measurement", "RegionShare", "measure"]
 
@@ -48,6 +49,8 @@ class RegionShare:
         projection on what no other parameter can imitate. The shares sum to 1.
     chi2 : float
         χ² of its pixels.
+    telluric : str
+        Telluric ranges that touch the region, empty where there are none.
 
     """
 
@@ -56,6 +59,7 @@ class RegionShare:
     snr: float
     information: float
     chi2: float
+    telluric: str
 
 
 @dataclass(frozen=True)
@@ -75,6 +79,11 @@ class Measurement:
         How often the fine grid was made finer during the fit.
     digest : str
         Of the job.
+    correlation : dict
+        Correlation of neighbouring pixels that the job states or asks to measure, by spectrum.
+    correlated_stat : float or None
+        Statistical error of Δα/α, ppm, if the noise has that correlation; None where nothing is
+        stated. `stat` does not include it.
     timings : dict
         Seconds by stage.
     started : datetime
@@ -88,6 +97,8 @@ class Measurement:
     shares: list[RegionShare]
     resamplings: int
     digest: str
+    correlation: dict[str, float]
+    correlated_stat: float | None
     timings: dict[str, float]
     started: datetime
     warnings: list[str] = field(default_factory=list)
@@ -161,6 +172,7 @@ class Measurement:
             "atomic_data": {
                 "structure": self.job.atomic.structure,
                 "tables": self.built.atoms.digests,
+                "changes": list(self.built.atoms.changes),
             },
             "fit": {
                 "solver": self.fit.solver,
@@ -182,6 +194,10 @@ class Measurement:
                 "errors_withheld": self.fit.covariance.reasons,
             },
             "sampling": {"fine_grid_kms": list(model.spacings), "resamplings": self.resamplings},
+            "pixel_correlation": {
+                "by_spectrum": self.correlation,
+                "stat_ppm_with_it": self.correlated_stat,
+            },
             "timings_s": {name: round(value, 3) for name, value in self.timings.items()},
             "warnings": self.warnings,
         }
@@ -213,9 +229,77 @@ def _shares(
                 snr=float(np.median(snr)),
                 information=part / total if total > 0.0 else 0.0,
                 chi2=float(residual[rows] @ residual[rows]),
+                telluric=_telluric(built, [model.segments[k] for k in own]),
             )
         )
     return shares
+
+
+def _telluric(built: BuiltModel, segments: list[SegmentTerms]) -> str:
+    """Telluric ranges that touch the segments, shifted where the velocity is known."""
+    found: dict[str, None] = {}
+    for segment in segments:
+        spectrum = next(s for s in built.spectra if s.name == segment.spectrum)
+        velocity = spectrum.reading.barycentric_velocity or 0.0
+        limits = float(segment.edges_low[0]), float(segment.edges_high[-1])
+        for band in built.atoms.telluric_overlap(limits, velocity):
+            found[f"{band.molecule} ({band.strength})"] = None
+    return ", ".join(found)
+
+
+def _correlation(built: BuiltModel, warnings: list[str]) -> dict[str, float]:
+    """Correlation of neighbouring pixels by spectrum, where the job has one."""
+    found: dict[str, float] = {}
+    for table, spectrum in zip(built.job.spectra, built.spectra, strict=True):
+        if table.correlation == "measured":
+            measured = noise_correlation(spectrum)
+            if measured is None:
+                warnings.append(
+                    f"{table.id}: too few quiet pixels to measure the correlation of neighbours"
+                )
+            else:
+                found[table.id] = measured[0]
+        elif table.correlation is not None:
+            found[table.id] = float(table.correlation)
+    return found
+
+
+def _correlated_stat(
+    built: BuiltModel, fit: FitResult, correlation: dict[str, float]
+) -> float | None:
+    """σ of the same least-squares estimate if the noise of neighbouring pixels is correlated.
+
+    With weights w, the row of (JᵀJ)⁻¹Jᵀ of Δα/α, the variance is wᵀ R w, where R has the
+    correlation beside its diagonal (for instance Press et al. 2007, Numerical Recipes, §15.4).
+    """
+    names = fit.covariance.names
+    if not correlation or fit.sigma(ALPHA) is None:
+        return None
+    model = built.model
+    _, jacobian = model.residuals_and_jacobian(fit.free)
+    weights = jacobian @ fit.covariance.matrix[names.index(ALPHA)]
+    variance = float(weights @ weights)
+    for k, segment in enumerate(model.segments):
+        rho = correlation.get(segment.spectrum, 0.0)
+        neighbours = np.diff(np.flatnonzero(segment.good)) == 1
+        own = weights[model.rows[k] : model.rows[k + 1]]
+        variance += 2.0 * rho * float(np.sum((own[1:] * own[:-1])[neighbours]))
+    return float(np.sqrt(max(variance, 0.0)))
+
+
+def _degeneracies(fit: FitResult) -> list[str]:
+    """One sentence for each set of parameters that only move together, with the cure."""
+    sentences = []
+    for names in fit.covariance.degenerate:
+        shifts = [name for name in names if name.startswith("distortion")]
+        cure = "fix one of them or give it a prior"
+        if shifts:
+            cure = f"fix {shifts[0]} (sigma = 0) or give it a prior (for instance sigma = 200)"
+        shown = ", ".join(names[:6]) + (f" and {len(names) - 6} more" if len(names) > 6 else "")
+        sentences.append(
+            f"the data do not tell these parameters apart, so they have no errors: {shown}; {cure}"
+        )
+    return sentences
 
 
 def _alpha_alone(names: tuple[str, ...], jacobian: Array) -> Array:
@@ -283,8 +367,20 @@ def measure(job: Job, *, progress: Progress | None = None) -> Measurement:
     warnings = [
         f"{spectrum.name}: {text}" for spectrum in spectra for text in spectrum.reading.warnings
     ]
+    warnings += _degeneracies(fit)
+    correlation = _correlation(built, warnings)
     return Measurement(
-        built, fit, predictions, shares, resamplings, job_digest(job), timings, started, warnings
+        built,
+        fit,
+        predictions,
+        shares,
+        resamplings,
+        job_digest(job),
+        correlation,
+        _correlated_stat(built, fit, correlation),
+        timings,
+        started,
+        warnings,
     )
 
 

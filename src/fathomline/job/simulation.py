@@ -6,8 +6,8 @@ The absorption comes from `fathomline.job.synthesis`, which shares no code with 
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -16,18 +16,20 @@ from numpy.typing import NDArray
 from fathomline.atomic import AtomicData, Transition
 from fathomline.constants import C_KMS
 from fathomline.errors import JobError, ResultError
-from fathomline.job.inputs import load_atoms, load_spectrum
+from fathomline.job.building import unknown_line
+from fathomline.job.inputs import distortion_bases, line_spread, load_atoms, load_spectrum
 from fathomline.job.number import Reference
 from fathomline.job.schema import Component, Job
 from fathomline.job.schema import Spectrum as SpectrumTable
 from fathomline.job.synthesis import Cloud, synthetic_transmission
 from fathomline.job.writing import write_job
-from fathomline.spectra import Spectrum, write_spectrum
+from fathomline.spectra import Spectrum, TabulatedLineSpread, write_spectrum
 
 __all__ = ["Noise", "clouds_of", "simulate", "simulate_to_folder", "synthetic_grid"]
 
 Array = NDArray[np.float64]
 
+_BLOCK_KMS = 500.0  # absorption is computed to this distance from each line
 _MARGIN_KMS = 60.0  # of a synthetic spectrum beyond its windows
 
 
@@ -103,32 +105,90 @@ def _blocks(centres: Sequence[float], half_width: float) -> list[tuple[float, fl
     return [(low, high) for low, high in merged]
 
 
+def _lines_of(job: Job, atoms: AtomicData) -> list[Transition]:
+    """All lines that the job's components can have."""
+    ions = dict.fromkeys(ion for component in job.components for ion in component.logN)
+    return [t for ion in ions for t in atoms.find(ion=ion, extra=True) if t.ground]
+
+
+def _blends_of(job: Job, atoms: AtomicData) -> tuple[list[Cloud], list[Transition]]:
+    """Clouds and lines of the job's blends; each line is renamed to belong to its cloud alone."""
+    start = job.start_values()
+    clouds, lines = [], []
+    for k, blend in enumerate(job.blends):
+        name = f"blend {k + 1}"
+        if blend.wavelength is not None:
+            own = [unknown_line(blend.wavelength)]
+        else:
+            own = [atoms[transition] for transition in blend.transitions]
+        lines += [replace(line, ion=name) for line in own]
+        clouds.append(
+            Cloud(
+                velocity=start[Reference("blend", k, "velocity")],
+                log_columns={name: start[Reference("blend", k, "logN")]},
+                b_turb=start[Reference("blend", k, "b")],
+                redshift=0.0 if blend.redshift is None else blend.redshift,
+            )
+        )
+    return clouds, lines
+
+
 def _transmission(
     redshift: float,
     clouds: Sequence[Cloud],
-    atoms: AtomicData,
+    lines: Sequence[Transition],
     edges: Array,
     fwhm: float,
     dalpha: float,
+    distortion: Callable[[Array], Array] | None,
+    profile: Callable[[Array], Array] | None,
 ) -> Array:
-    z = redshift
-    ions = {ion for cloud in clouds for ion in cloud.log_columns}
-    lines: list[Transition] = [
-        t
-        for ion in ions
-        for t in atoms.find(ion=ion, extra=True)
-        if t.ground and edges[0] < t.observed_wavelength(z) < edges[-1]
+    places = [
+        (
+            line,
+            line.observed_wavelength(redshift if cloud.redshift is None else cloud.redshift)
+            * (1.0 + cloud.velocity / C_KMS),
+        )
+        for line in lines
+        for cloud in clouds
+        if line.ion in cloud.log_columns
     ]
-    fastest = max(abs(cloud.velocity) for cloud in clouds)
     out = np.ones(edges.size - 1)
-    for low, high in _blocks([t.observed_wavelength(z) for t in lines], fastest + 500.0):
+    inside = [(line, place) for line, place in places if edges[0] < place < edges[-1]]
+    for low, high in _blocks([place for _, place in inside], _BLOCK_KMS):
         first, last = np.searchsorted(edges, [low, high])
         first, last = max(first - 1, 0), min(last + 1, edges.size)
-        near = [t for t in lines if low <= t.observed_wavelength(z) <= high]
+        near = {line.name: line for line, place in places if low <= place <= high}
         out[first : last - 1] = synthetic_transmission(
-            edges[first:last], near, clouds, redshift=z, fwhm=fwhm, dalpha_ppm=dalpha
+            edges[first:last],
+            list(near.values()),
+            clouds,
+            redshift=redshift,
+            fwhm=fwhm,
+            dalpha_ppm=dalpha,
+            distortion=distortion,
+            profile=profile,
         )
     return out
+
+
+def _distortion_of(job: Job, spectrum: str) -> Callable[[Array], Array] | None:
+    """Distortion velocity (m/s) of a spectrum at the job's values; regions do not matter here."""
+    terms = [
+        (table.value, basis)
+        for table, basis in zip(job.distortions, distortion_bases(job), strict=True)
+        if spectrum in table.spectra and table.value != 0.0
+    ]
+    if not terms:
+        return None
+
+    def velocity(wavelength: Array) -> Array:
+        total = np.zeros_like(wavelength)
+        for value, basis in terms:
+            total += value * basis(wavelength)
+        return total
+
+    return velocity
 
 
 def simulate(
@@ -163,16 +223,27 @@ def simulate(
     """
     start = job.start_values()
     alpha = start[Reference("alpha", 0, "dalpha")] if dalpha_ppm is None else dalpha_ppm
-    clouds = clouds_of(job) if clouds is None else clouds
+    blends, blend_lines = _blends_of(job, atoms)
+    clouds = [*(clouds_of(job) if clouds is None else clouds), *blends]
+    lines = [*_lines_of(job, atoms), *blend_lines]
     children = np.random.SeedSequence(noise.seed).spawn(len(job.spectra))
     spectra = []
     for i, (table, pixels) in enumerate(zip(job.spectra, edges, strict=True)):
-        resolution = table.resolution
-        if resolution.R is not None:
-            fwhm = C_KMS / resolution.R
-        else:
-            fwhm = start[Reference("spectrum", i, "fwhm")]
-        flux = _transmission(job.absorber.redshift, clouds, atoms, pixels, fwhm, alpha)
+        spread = line_spread(table.resolution, job, i)
+        profile = None
+        if isinstance(spread, TabulatedLineSpread):
+            middle = np.array([0.5 * (pixels[0] + pixels[-1])])
+            profile = spread.profile_at(float(middle[0]))
+        flux = _transmission(
+            job.absorber.redshift,
+            clouds,
+            lines,
+            pixels,
+            spread.fwhm,
+            alpha,
+            _distortion_of(job, table.id),
+            profile,
+        )
         sigma = np.full(flux.size, 1e-4 if math.isinf(noise.snr) else 1.0 / noise.snr)
         if not math.isinf(noise.snr):
             flux = flux + sigma * np.random.default_rng(children[i]).standard_normal(flux.size)

@@ -2,14 +2,15 @@
 
 Nothing here is shared with `fathomline.model` or `fathomline.profile`: the optical depth is formed
 in frequency from SI constants and scipy's Faddeeva function on a grid much finer than any line,
-smoothed by a sampled Gaussian with the fast Fourier transform, and integrated over pixels in
-wavelength through the antiderivative of a cubic spline. The atomic data are shared, of course.
+smoothed by a sampled kernel with the fast Fourier transform, and integrated over pixels in
+wavelength through the antiderivative of a cubic spline. A distortion moves the pixel edges to the
+true wavelengths of the light that they record. The atomic data are shared, of course.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -36,13 +37,14 @@ class Cloud:
     Attributes
     ----------
     velocity : float
-        km/s about the absorber redshift.
+        km/s about `redshift`, or about that of the absorber where it is None.
     log_columns : mapping
         log10 N/cm⁻² by ion.
     b_turb : float
         Turbulent Doppler parameter, km/s.
     temperature : float
         Kinetic temperature, K.
+    redshift : float or None
 
     """
 
@@ -50,6 +52,7 @@ class Cloud:
     log_columns: Mapping[str, float]
     b_turb: float = 0.0
     temperature: float = 0.0
+    redshift: float | None = None
 
     def width(self, mass: float) -> float:
         """Doppler parameter, m/s, of atoms of `mass` u."""
@@ -69,7 +72,8 @@ def _optical_depth(
     cross_section = si.e**2 / (4.0 * si.epsilon_0 * si.m_e * si.c)  # m² Hz, times f
     tau = np.zeros_like(wavelength)
     for cloud in clouds:
-        stretch = (1.0 + redshift) * (1.0 + 1e3 * cloud.velocity / si.c)
+        zero = redshift if cloud.redshift is None else cloud.redshift
+        stretch = (1.0 + zero) * (1.0 + 1e3 * cloud.velocity / si.c)
         rest_frequency = frequency * stretch
         for transition in transitions:
             if transition.ion not in cloud.log_columns:
@@ -106,8 +110,10 @@ def synthetic_transmission(
     redshift: float,
     fwhm: float,
     dalpha_ppm: float = 0.0,
+    distortion: Callable[[Array], Array] | None = None,
+    profile: Callable[[Array], Array] | None = None,
 ) -> Array:
-    """Mean transmission of each pixel behind a Gaussian line-spread function.
+    """Mean transmission of each pixel behind a line-spread function.
 
     Parameters
     ----------
@@ -118,15 +124,22 @@ def synthetic_transmission(
     redshift : float
         Zero of the clouds' velocities.
     fwhm : float
-        Full width at half maximum of the line-spread function, km/s.
+        Full width at half maximum of the line-spread function, km/s; also the scale of `profile`.
     dalpha_ppm : float
         Δα/α, ppm.
+    distortion : callable, optional
+        True wavelength (n,), Å → velocity (n,), m/s, by which it is recorded too red.
+    profile : callable, optional
+        Line-spread function against recorded minus true velocity, km/s, in place of the Gaussian;
+        its area does not matter.
 
     Returns
     -------
     array (n,)
 
     """
+    if distortion is not None:
+        edges = _true_wavelength(np.asarray(edges, dtype=np.float64), distortion)
     sigma = fwhm / math.sqrt(8.0 * math.log(2.0))
     step = min(sigma, _narrowest(transitions, clouds)) / _POINTS_PER_WIDTH
     reach = _REACH * sigma
@@ -135,12 +148,21 @@ def synthetic_transmission(
     grid = edges[0] * np.exp((np.arange(math.ceil(span / step) + 2) * step - reach) / c_kms)
     lost = -np.expm1(-_optical_depth(grid, transitions, clouds, redshift, dalpha_ppm))
     half = math.ceil(reach / step)
-    kernel = np.exp(-0.5 * (np.arange(-half, half + 1) * step / sigma) ** 2)
+    offset: Array = np.arange(-half, half + 1, dtype=np.float64) * step
+    kernel = np.exp(-0.5 * (offset / sigma) ** 2) if profile is None else profile(offset)
     # the far ends of the grid see zeros outside it; they lie beyond the reach of every pixel
     smooth = 1.0 - fftconvolve(lost, kernel / kernel.sum(), mode="same")
     primitive = CubicSpline(grid, smooth).antiderivative()
     mean: Array = np.diff(primitive(edges)) / np.diff(edges)
     return mean
+
+
+def _true_wavelength(recorded: Array, distortion: Callable[[Array], Array]) -> Array:
+    """Wavelengths whose light is recorded at `recorded`: λ (1 + v_d(λ)/c) = recorded."""
+    true: Array = recorded
+    for _ in range(20):
+        true = recorded / (1.0 + distortion(true) / si.c)
+    return true
 
 
 def equivalent_width(transition: Transition, cloud: Cloud, *, reach: float) -> float:

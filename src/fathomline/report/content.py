@@ -28,6 +28,7 @@ __all__ = [
     "components_text",
     "headline",
     "input_files",
+    "others_table",
     "restarts_table",
     "settings",
     "statuses",
@@ -216,6 +217,26 @@ def components_text(m: Measurement) -> TableText:
             *(widths[key] for key in used),
             *((f"log N({ion})", "cm⁻²") for ion in ions),
         ),
+        tuple(rows),
+    )
+
+
+def others_table(m: Measurement) -> TableText | None:
+    """What was fitted or held besides components and continua: calibration, blends and the like."""
+    rows = []
+    for parameter in m.built.model.parameters:
+        name = parameter.name
+        if name.startswith(("alpha.", "component[")) or ".continuum[" in name:
+            continue
+        prior = parameter.prior
+        held = "" if prior is None else f"{plain_number(prior.mean)} ± {plain_number(prior.sigma)}"
+        rows.append((Cell(name), _cell(m, name), Cell(parameter.unit), Cell(held)))
+    if not rows:
+        return None
+    return TableText(
+        "Calibration, blends and other numbers besides the components and the continua. "
+        "A prior is a Gaussian that takes part in the fit.",
+        (("Parameter", ""), ("Value", ""), ("Unit", ""), ("Prior", "")),
         tuple(rows),
     )
 

@@ -97,24 +97,32 @@ def measurement_table(m: Measurement) -> Table:
 
 
 def budget_table(m: Measurement) -> Table:
-    """One row per term of the error budget; for now the statistical one."""
+    """One row per term of the error budget; for now the statistical ones."""
     reason = "" if m.stat is not None else ",".join(m.fit.flags)
+    rows: list[tuple[str, Cell, str]] = [
+        ("statistical", m.stat, reason or "photon noise with every free parameter marginalised")
+    ]
+    if m.correlated_stat is not None and m.stat is not None:
+        more = m.correlated_stat**2 - m.stat**2
+        which = ", ".join(f"{name} {rho:+.3f}" for name, rho in m.correlation.items())
+        note = (
+            f"with it the statistical error is {m.correlated_stat:.4g} ppm; correlation of "
+            f"neighbouring pixels: {which}; not included in stat_ppm"
+        )
+        rows.append(("pixel correlation", float(np.sqrt(max(more, 0.0))), note))
+    n = len(rows)
+    response = "signed shift per unit of the shared error, 1e-6"
     return _table(
         [
-            ("term", None, "name of the term", ["statistical"]),
-            ("kind", None, "statistical or systematic", ["statistical"]),
-            ("shift_ppm", None, "shift of dalpha/alpha, 1e-6", [None]),
-            ("sigma_ppm", None, "1 sigma error, 1e-6", [m.stat]),
-            ("method", None, "how it was found", ["covariance"]),
-            ("n_refits", None, "refits behind it", [0]),
-            ("shared", None, "tag shared with other absorbers", [""]),
-            ("response_ppm", None, "signed shift per unit of the shared error, 1e-6", [None]),
-            (
-                "note",
-                None,
-                "remark",
-                [reason or "photon noise with every free parameter marginalised"],
-            ),
+            ("term", None, "name of the term", [row[0] for row in rows]),
+            ("kind", None, "statistical or systematic", ["statistical"] * n),
+            ("shift_ppm", None, "shift of dalpha/alpha, 1e-6", [None] * n),
+            ("sigma_ppm", None, "1 sigma error, 1e-6", [row[1] for row in rows]),
+            ("method", None, "how it was found", ["covariance"] * n),
+            ("n_refits", None, "refits behind it", [0] * n),
+            ("shared", None, "tag shared with other absorbers", [""] * n),
+            ("response_ppm", None, response, [None] * n),
+            ("note", None, "remark", [row[2] for row in rows]),
         ]
     )
 
@@ -183,6 +191,7 @@ def transitions_table(m: Measurement) -> Table:
                 [s.information for s in shares],
             ),
             ("chi2", None, "chi squared of its pixels", [s.chi2 for s in shares]),
+            ("telluric", None, "telluric ranges that touch it", [s.telluric for s in shares]),
             (
                 "chi2_share",
                 None,

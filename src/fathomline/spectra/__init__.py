@@ -23,7 +23,7 @@ from fathomline.spectra.media import AIR_FORMULAS, air_to_vacuum, vacuum_to_air
 from fathomline.spectra.read import FRAMES, MEDIA, read_spectrum
 from fathomline.spectra.reading import Reading
 from fathomline.spectra.spectrum import Spectrum
-from fathomline.spectra.summary import SpectrumSummary, summarise
+from fathomline.spectra.summary import SpectrumSummary, noise_correlation, summarise
 from fathomline.spectra.units import ALLOWED_UNITS
 from fathomline.spectra.write import write_spectrum
 
@@ -42,6 +42,7 @@ __all__ = [
     "air_to_vacuum",
     "barycentric_velocity",
     "local_level",
+    "noise_correlation",
     "order_edges_from_spacing",
     "read_distortion_table",
     "read_line_spread",

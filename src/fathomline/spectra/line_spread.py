@@ -8,6 +8,7 @@ itself, so a width measured on pixelised data must have the pixel removed first.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, TypeAlias
@@ -192,6 +193,25 @@ class TabulatedLineSpread:
             below + 1, pixel
         ]
         return mixed
+
+    def profile_at(self, wavelength: float) -> Callable[[NDArray[np.float64]], NDArray[np.float64]]:
+        """The profile at a wavelength (Å) as a function of velocity (n,), km/s; zero outside."""
+        from scipy.interpolate import CubicSpline
+
+        place = np.interp(wavelength, self.wavelengths, np.arange(self.wavelengths.size))
+        below = min(int(place), max(self.wavelengths.size - 2, 0))
+        above = min(below + 1, self.wavelengths.size - 1)
+        part = place - below
+        spline = CubicSpline(
+            self.velocity, (1.0 - part) * self.profiles[below] + part * self.profiles[above]
+        )
+        low, high = self.velocity[0], self.velocity[-1]
+
+        def profile(velocity: NDArray[np.float64]) -> NDArray[np.float64]:
+            inside = (velocity >= low) & (velocity <= high)
+            return np.where(inside, spline(np.clip(velocity, low, high)), 0.0)
+
+        return profile
 
     @property
     def reach(self) -> float:
