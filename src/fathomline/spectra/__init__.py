@@ -3,6 +3,14 @@
 from __future__ import annotations
 
 from fathomline.spectra.continuum import local_level, spectrum_level
+from fathomline.spectra.distortion import (
+    order_edges_from_spacing,
+    read_distortion_table,
+    sawtooth_basis,
+    shift_basis,
+    slope_basis,
+    table_basis,
+)
 from fathomline.spectra.frames import barycentric_velocity, to_barycentric
 from fathomline.spectra.line_spread import GaussianLineSpread, LineSpread
 from fathomline.spectra.media import AIR_FORMULAS, air_to_vacuum, vacuum_to_air
@@ -26,9 +34,15 @@ __all__ = [
     "air_to_vacuum",
     "barycentric_velocity",
     "local_level",
+    "order_edges_from_spacing",
+    "read_distortion_table",
     "read_spectrum",
+    "sawtooth_basis",
+    "shift_basis",
+    "slope_basis",
     "spectrum_level",
     "summarise",
+    "table_basis",
     "to_barycentric",
     "vacuum_to_air",
     "write_spectrum",
