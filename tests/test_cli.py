@@ -94,7 +94,7 @@ def test_run_json_records_the_provenance(demo):
     assert record["versions"]["numpy"] == np.__version__
     assert len(record["inputs"][0]["file_digest"]) == 64
     assert len(record["fit"]["restarts"]) == 4
-    assert all(restart["returned"] for restart in record["fit"]["restarts"])
+    assert all(restart["outcome"] == "returned" for restart in record["fit"]["restarts"])
     assert set(record["atomic_data"]["tables"]) >= {"transitions.ecsv", "structure.ecsv"}
 
 

@@ -187,6 +187,15 @@ def test_parameters_without_an_error_have_a_reason():
     assert np.all(np.isfinite(covariance.matrix))
 
 
+def test_draws_from_the_covariance_have_it():
+    # a draw R z has covariance R Rᵀ
+    jacobian = np.random.default_rng(4).standard_normal((30, 4)) * [1.0, 1e3, 1e-3, 1.0]
+    names = ("a", "b", "c", "d")
+    covariance = covariance_from_jacobian(jacobian, names, np.array([0, 0, 0, 1], dtype=bool))
+    root = covariance.root()
+    np.testing.assert_allclose(root @ root.T, covariance.matrix, rtol=1e-9, atol=1e-20)
+
+
 def test_aicc():
     # Hurvich & Tsai 1989: χ² + 2p + 2p(p+1)/(n − p − 1)
     assert aicc(100.0, 50, 4) == pytest.approx(100 + 8 + 40 / 45)

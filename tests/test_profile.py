@@ -10,7 +10,15 @@ import pytest
 
 from fathomline.atomic import LineComponent, Transition
 from fathomline.job.synthesis import Cloud, equivalent_width
-from fathomline.profile import FineGrid, TransitionLines, voigt, voigt_core, voigt_wing
+from fathomline.profile import (
+    FineGrid,
+    LineItem,
+    LineTable,
+    TransitionLines,
+    voigt,
+    voigt_core,
+    voigt_wing,
+)
 from support import ridders
 
 A_GRID = [0.0, 1e-8, 1e-6, 1e-5, 1e-4, 5e-4, 1e-3, 3e-3, 0.01, 0.03, 0.1, 0.3, 1.0, 3.0, 10.0]
@@ -114,7 +122,7 @@ FADDEEVA = [
 
 @pytest.mark.parametrize(("a", "u", "real", "imaginary"), FADDEEVA)
 def test_tabulated_values(a, u, real, imaginary):
-    h, h_u, _, h_a = voigt_core(np.array([a]), np.array([[u]]), derivatives=True)[:, 0]
+    h, h_u, _, h_a = voigt_core(np.array([a]), np.array([u]), derivatives=True)
     assert h[0] == pytest.approx(real, rel=1e-6, abs=1e-14)
     # w' = −2 z w + 2i/√π (DLMF 7.10.2): both derivatives follow from both parts
     assert h_u[0] == pytest.approx(-2 * (u * real - a * imaginary), rel=1e-6, abs=1e-10)
@@ -125,7 +133,7 @@ def test_tabulated_values(a, u, real, imaginary):
 @pytest.mark.parametrize("a", [1e-4, 0.003, 0.1, 2.0])
 def test_derivatives_against_adaptive_ones(a):
     u = np.linspace(-8.0, 8.0, 41)
-    _, h_u, u_h_u, h_a = voigt_core(np.array([a]), u[None, :], derivatives=True)[:, 0]
+    _, h_u, u_h_u, h_a = voigt_core(np.full(u.size, a), u, derivatives=True)
     np.testing.assert_allclose(u_h_u, u * h_u, rtol=1e-14)
     np.testing.assert_allclose(h_u, ridders(lambda t: voigt(a, u + t), 0.0, 0.1), atol=1e-9)
     np.testing.assert_allclose(h_a, ridders(lambda t: voigt(t, u), a, a / 4), atol=1e-8)
@@ -134,9 +142,9 @@ def test_derivatives_against_adaptive_ones(a):
 @pytest.mark.parametrize("a", [1e-6, 1e-4, 1e-3, 0.01])
 def test_wings_join_the_core(a):
     """Beyond 8 Doppler widths the asymptotic series stands for the full function."""
-    u = np.array([[-300.0, -60.0, -14.0, -9.0, -8.0, 8.0, 8.5, 11.0, 30.0, 900.0]])
-    full = voigt_core(np.array([a]), u, derivatives=True)
-    wing = voigt_wing(np.array([a]), u, derivatives=True)
+    u = np.array([-300.0, -60.0, -14.0, -9.0, -8.0, 8.0, 8.5, 11.0, 30.0, 900.0])
+    full = voigt_core(np.full(u.size, a), u, derivatives=True)
+    wing = voigt_wing(np.full(u.size, a), u, derivatives=True)
     # 4e-6: the first term left out at u = 8; 1e-5 for its derivative; rounding of 1 − 2uD at 900
     np.testing.assert_allclose(wing[0], full[0], rtol=5e-6)
     for i in (1, 2, 3):
@@ -170,6 +178,12 @@ VOIGT_GROWTH = [  # tau(u) = tau0 H(a,u)/H(a,0); six digits trusted
 ]
 
 
+def depth_of(line: Transition, grid: FineGrid, b: float, column: float) -> np.ndarray:
+    table = LineTable([LineItem(0, TransitionLines(line))], [grid])
+    inverse = grid.inverse[None, :]
+    return table.evaluate(inverse, np.ones(1), np.array([column]), np.full(2, b), 0.0)[0, 0]
+
+
 def line_with(a: float, tau0: float, b: float) -> tuple[Transition, float]:
     """A made-up line of 2000 Å and the log N that give damping a and central depth tau0."""
     wavelength, f = 2000.0, 0.1
@@ -187,8 +201,7 @@ def line_with(a: float, tau0: float, b: float) -> tuple[Transition, float]:
         None,
         structure=(LineComponent(1e8 / wavelength, 1.0, 20.0),),
     )
-    centre = FineGrid(math.log(wavelength), 1e-6, np.array([1 / wavelength]))
-    unit = TransitionLines(line).depth(centre, 1.0, np.array([b]), 1.0, 0.0)[0]
+    unit = depth_of(line, FineGrid(math.log(wavelength), 1e-6, 1), b, 1.0)[0]
     return line, math.log10(tau0 / unit)
 
 
@@ -196,8 +209,7 @@ def model_width(line: Transition, logn: float, b: float, reach: float) -> float:
     """Equivalent width over λ from the fitted model's own optical depth."""
     v = np.arange(-reach, reach, b / 60.0)
     wave = line.wavelength * np.exp(v / 299792.458)
-    grid = FineGrid(math.log(wave[0]), b / 60.0 / 299792.458, 1 / wave)
-    tau = TransitionLines(line).depth(grid, 1.0, np.array([b]), 10**logn, 0.0)
+    tau = depth_of(line, FineGrid(math.log(wave[0]), b / 60.0 / 299792.458, wave.size), b, 10**logn)
     return float(np.trapezoid(-np.expm1(-tau), wave)) / line.wavelength
 
 

@@ -126,7 +126,7 @@ def test_the_page_says_what_a_reader_needs(measurement, page):
     assert "Nave 2012" in text  # a source of the Fe II wavenumbers
     assert "fixed" in text
     assert "tied to component[1].b" in text
-    assert "Returned" in text
+    assert "returned" in text
 
 
 def test_the_folder_of_the_spectrum_stays_private(measurement, page):

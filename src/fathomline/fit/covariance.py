@@ -62,6 +62,13 @@ class Covariance:
         result: Array = np.sqrt(np.diag(self.matrix))
         return result
 
+    def root(self) -> Array:
+        """A matrix R (n, n) with R Rᵀ the covariance: R times unit normals is a draw from it."""
+        scale = np.where(self.sigmas > 0.0, self.sigmas, 1.0)
+        values, vectors = np.linalg.eigh(self.matrix / np.outer(scale, scale))
+        root: Array = scale[:, None] * vectors * np.sqrt(np.maximum(values, 0.0))
+        return root
+
 
 def covariance_from_jacobian(
     jacobian: Array, names: tuple[str, ...], at_bound: NDArray[np.bool_]

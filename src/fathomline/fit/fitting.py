@@ -1,10 +1,11 @@
 """The fit of one model: minimise, then show that the minimum does not depend on the start.
 
-After convergence the fit is repeated from perturbed values: Δα/α moved by ±10 σ in turn, and every
-other parameter drawn around its best value with its own σ. A restart has returned when
-Δα/α agrees to 0.02 σ and χ² to 0.01. When a restart finds a lower χ² it becomes the result, and
-the restarts begin anew. A fit is called converged only when the minimiser converged and every
-restart returned.
+After convergence the fit is repeated from perturbed values: all parameters drawn together from
+their covariance about the best values, and then Δα/α alone moved to ±10 σ in turn. A restart has
+returned when Δα/α agrees to 0.02 σ and χ² to 0.01. One that converges at a higher χ² has found
+another, worse minimum, which is told but proves nothing against the better one. When a restart
+finds a lower χ² it becomes the result, and the restarts begin anew. A fit is called converged only
+when the minimiser converged and every restart returned or ended in a worse minimum.
 """
 
 from __future__ import annotations
@@ -19,7 +20,7 @@ from fathomline.errors import FitError
 from fathomline.fit.covariance import SINGULAR, Covariance, covariance_from_jacobian
 from fathomline.fit.least_squares import Minimum, minimise
 from fathomline.fit.lmfit_bridge import minimise_with_lmfit
-from fathomline.fit.result import FitResult, Restart
+from fathomline.fit.result import FitResult, Outcome, Restart
 from fathomline.model import AbsorberModel
 
 __all__ = ["CAUTIONS", "FLAGS", "FitSettings", "fit_model"]
@@ -29,7 +30,7 @@ Progress = Callable[[str, float], None]
 
 FLAGS = {
     "not-converged": "the minimiser stopped before it reached the minimum",
-    "restart-differs": "a restart from other values ended at another Δα/α",
+    "restart-differs": "a restart from other values ended elsewhere at no higher χ²",
     "no-error": "Δα/α has no error: the data do not constrain it alone",
     "alpha-at-bound": "Δα/α lies at a bound",
     "poor-fit": "χ²/ν is above 1.5",
@@ -38,6 +39,7 @@ FLAGS = {
 """Flags of a result that should not be trusted, and what they mean."""
 
 CAUTIONS = {
+    "other-minimum": "a restart ended in another minimum, with a higher χ²",
     "at-bound": "a component parameter lies at a bound",
     "singular": "a parameter other than Δα/α is not constrained by the data",
 }
@@ -151,11 +153,11 @@ def _restart(
 ) -> tuple[list[Restart], Minimum | None]:
     """All restarts from around `best`; stops early with a better minimum if one is found."""
     parameters = model.parameters
-    sigmas = covariance.sigmas
+    sigmas, spread = covariance.sigmas, covariance.root()
     alpha = _free_alpha(model)
     records: list[Restart] = []
     for k in range(settings.restarts):
-        start = best.x + sigmas * rng.standard_normal(best.x.size)
+        start = best.x + spread @ rng.standard_normal(best.x.size)
         if alpha is not None:
             start[alpha] = best.x[alpha] + (-1) ** k * RESTART_SHIFT * sigmas[alpha]
         start = np.clip(start, parameters.lower, parameters.upper)
@@ -164,14 +166,20 @@ def _restart(
         if alpha is not None and sigmas[alpha] > 0.0:
             shift = float((found.x[alpha] - best.x[alpha]) / sigmas[alpha])
         change = found.chi2 - best.chi2
-        returned = found.converged and abs(shift) <= _RETURN_SIGMA and abs(change) <= _RETURN_CHI2
+        close = abs(shift) <= _RETURN_SIGMA and abs(change) <= _RETURN_CHI2
+        outcome: Outcome = "differs"
+        if not found.converged:
+            outcome = "not converged"
+        elif close:
+            outcome = "returned"
+        elif change > _RETURN_CHI2:
+            outcome = "worse minimum"
         records.append(
             Restart(
                 start_dalpha=float(start[alpha]) if alpha is not None else 0.0,
                 shift_sigma=shift,
                 chi2_change=change,
-                converged=found.converged,
-                returned=returned,
+                outcome=outcome,
                 n_evaluations=found.n_evaluations,
             )
         )
@@ -200,8 +208,12 @@ def _record(
     flags = []
     if not best.converged:
         flags.append("not-converged")
-    if not all(restart.returned for restart in restarts):
+    outcomes = {restart.outcome for restart in restarts}
+    proved = outcomes <= {"returned", "worse minimum"}
+    if not proved:
         flags.append("restart-differs")
+    if "worse minimum" in outcomes:
+        flags.append("other-minimum")
     alpha = _free_alpha(model)
     if alpha is not None:
         if best.at_bound[alpha]:
@@ -225,7 +237,7 @@ def _record(
         n_data=model.n_data,
         n_priors=n_priors,
         edm=best.edm,
-        converged=best.converged and all(restart.returned for restart in restarts),
+        converged=best.converged and proved,
         message=best.message,
         flags=tuple(flags),
         restarts=restarts,

@@ -40,8 +40,9 @@ EDM_TOLERANCE = 1e-8
 _RANK = 1e-10  # singular values below this share of the largest carry no information
 _FIRST_RADIUS = 100.0
 _SMALLEST_RADIUS = 1e-10
-_ROUNDING = 1e-9  # of χ²: a smaller difference is rounding of the model
-_MAX_BLIND_STEPS = 4
+_ROUNDING = 1e-11  # of χ²: a smaller difference is rounding of the model
+_MAX_BLIND_STEPS = 20
+_NEAR_ENOUGH = 1e-6  # edm that still counts as converged when rounding hides any decrease
 
 
 @dataclass(frozen=True, slots=True)
@@ -171,7 +172,7 @@ def minimise(
             if iterations >= max_iterations:
                 return ended(False, "stopped at the largest number of iterations")
             if radius < _SMALLEST_RADIUS or blind_steps > _MAX_BLIND_STEPS:
-                if edm < _ROUNDING * max(chi2, 1.0):
+                if edm < max(edm_tolerance, _NEAR_ENOUGH):
                     return ended(True, "converged to the rounding of χ²")
                 return ended(False, "no step decreases χ²")
             iterations += 1

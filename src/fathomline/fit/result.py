@@ -5,15 +5,18 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fathomline.fit.covariance import Covariance
 
-__all__ = ["FitResult", "Restart", "aicc"]
+__all__ = ["FitResult", "Outcome", "Restart", "aicc"]
 
 Array = NDArray[np.float64]
+
+Outcome = Literal["returned", "worse minimum", "differs", "not converged"]
 
 
 def aicc(chi2: float, n_data: int, n_free: int) -> float:
@@ -37,9 +40,8 @@ class Restart:
         (Δα/α found − Δα/α of the result)/σ.
     chi2_change : float
         χ² found − χ² of the result.
-    converged : bool
-    returned : bool
-        Whether it came back to the same answer.
+    outcome : {"returned", "worse minimum", "differs", "not converged"}
+        Whether it came back to the same answer, or where else it ended.
     n_evaluations : int
 
     """
@@ -47,9 +49,13 @@ class Restart:
     start_dalpha: float
     shift_sigma: float
     chi2_change: float
-    converged: bool
-    returned: bool
+    outcome: Outcome
     n_evaluations: int
+
+    @property
+    def returned(self) -> bool:
+        """Whether it came back to the same answer."""
+        return self.outcome == "returned"
 
 
 @dataclass(frozen=True)
@@ -69,7 +75,7 @@ class FitResult:
     edm : float
         Estimated distance to the minimum, in units of χ².
     converged : bool
-        The minimiser converged and every restart came back.
+        The minimiser converged and every restart came back or ended in a worse minimum.
     message : str
     flags : tuple of str
         Reasons not to trust the result, as short codes; empty is good.

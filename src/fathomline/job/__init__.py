@@ -1,4 +1,4 @@
-"""The job file: one absorber, its spectra, regions and components, as checked data.
+"""The job file: one absorber, its spectra, regions, components and blends, as checked data.
 
 `read_job` reads a file and reports all its faults at once; `write_job` writes one that reads back
 as an equal job; `job_digest` identifies its content. The keys are described with the models, the
@@ -13,10 +13,14 @@ from fathomline.job.schema import (
     Absorber,
     Alpha,
     Atomic,
+    Blend,
     Columns,
     Component,
+    Covering,
+    Distortion,
     Fit,
     Job,
+    Override,
     Region,
     Resolution,
     Spectrum,
@@ -29,11 +33,15 @@ __all__ = [
     "Absorber",
     "Alpha",
     "Atomic",
+    "Blend",
     "Columns",
     "Component",
+    "Covering",
+    "Distortion",
     "Fit",
     "Job",
     "Number",
+    "Override",
     "Quantity",
     "Reference",
     "Region",

@@ -16,7 +16,7 @@ def job_digest(job: Job) -> str:
     """SHA-256 of the job's content, 64 hexadecimal digits.
 
     Comments, layout, the order of keys and defaults written out do not change it; any value that
-    differs does, and so does the order of spectra, regions and components, which references count.
+    differs does, and so does the order of arrays of tables, which references count.
     File names enter as they are written, before variables expand; the files' content does not.
     """
     return hashlib.sha256(canonical_json(job).encode()).hexdigest()
@@ -38,5 +38,7 @@ def _normal(value: Any) -> Any:
         return {key: _normal(entry) for key, entry in value.items()}
     if isinstance(value, list):
         return [_normal(entry) for entry in value]
+    if value == float("inf"):
+        return "inf"  # as in TOML; JSON has no such number, and no key takes both it and text
     # -0.0 equals 0.0, so that jobs which differ in this are equal; JSON would tell them apart.
     return 0.0 if isinstance(value, float) and value == 0.0 else value

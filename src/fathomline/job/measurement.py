@@ -174,7 +174,7 @@ class Measurement:
                         "start_dalpha_ppm": r.start_dalpha,
                         "shift_sigma": r.shift_sigma,
                         "chi2_change": r.chi2_change,
-                        "returned": r.returned,
+                        "outcome": r.outcome,
                     }
                     for r in self.fit.restarts
                 ],

@@ -10,17 +10,21 @@ unless its key says otherwise), or as a table::
 
 A tied number is ratio × target + offset. The target is a *reference*::
 
-    reference = section "[" count "]" "." quantity [ "[" quote ion quote "]" ]
-    section   = "component" | "spectrum" | "region"
+    reference = section "[" count "]" "." key [ "[" quote ion quote "]" ] | "atomic.heavy_magnesium"
+    section   = "component" | "blend" | "covering" | "spectrum" | "region" | "distortion"
     count     = 1, 2, 3 ... in the order of the job file
-    quantity  = "velocity" | "b" | "temperature" | "b_turb" | "logN"      of a component
+    key       = "velocity" | "b" | "temperature" | "b_turb" | "logN"      of a component
+              | "velocity" | "b" | "logN"                                 of a blend
+              | "value"                                                   of a covering
               | "fwhm"                                                    of a spectrum
               | "zero_level"                                              of a region
+              | "value"                                                   of a distortion
     quote     = " or '
 
-The ion goes with logN, and only with it: ``component[2].logN["Fe II"]``. Both ends of a tie have
-the same quantity (the two ions of a logN may differ). A target may itself be tied; chains end at
-an untied number, so they may not close to a circle.
+The ion goes with the logN of a component, and only with it: ``component[2].logN["Fe II"]``. Both
+ends of a tie have the same quantity (ions may differ, and a component may be tied to a blend). A
+target may itself be tied; chains end at an untied number, so they may not close to a circle. The
+value of a distortion is a plain number: it has a reference, and takes no part in ties.
 """
 
 from __future__ import annotations
@@ -60,13 +64,25 @@ class Quantity(NamedTuple):
     #: Smallest value with a meaning, and whether that value itself has one.
     least: float = -math.inf
     least_included: bool = False
+    #: Largest value with a meaning.
+    most: float = math.inf
 
     def is_meaningful(self, value: float) -> bool:
         """Whether the value is in the range that has a meaning."""
-        return value > self.least or (self.least_included and value == self.least)
+        if self.least_included and value == self.least:
+            return True
+        return self.least < value <= self.most
+
+    def range_text(self, value: float) -> str:
+        """What a value without a meaning must be instead, such as ``"above 0 km/s"``."""
+        if value > self.most:
+            relation, limit = "at most", self.most
+        else:
+            relation, limit = "at least" if self.least_included else "above", self.least
+        return f"{relation} {plain(limit)} {self.unit}".rstrip()
 
 
-#: The quantities that a `Number` can be, by the last word of their reference.
+#: The quantities that a `Number` can be, by the `quantity` of their reference.
 QUANTITIES: Mapping[str, Quantity] = MappingProxyType(
     {
         # The windows confine a velocity; the model, which knows them, sets those bounds.
@@ -84,18 +100,31 @@ QUANTITIES: Mapping[str, Quantity] = MappingProxyType(
         "zero_level": Quantity("continuum", (-1.0, 1.0)),
         # −1e6 ppm would be α = 0.
         "dalpha": Quantity("ppm", least=-1e6),
+        # Fraction of the source.
+        "covering": Quantity("", (0.0, 1.0), least=0.0, least_included=True, most=1.0),
+        # Factor on the terrestrial abundances of 25Mg and 26Mg; at 1/0.2101 there is no 24Mg left.
+        "heavy_magnesium": Quantity("", (0.0, 4.7), least=0.0, least_included=True, most=4.7),
+        # The unit is that of the kind of distortion: `Distortion.unit`.
+        "distortion": Quantity(""),
     }
 )
 
-_SECTION_QUANTITIES = MappingProxyType(
+_SECTION_KEYS = MappingProxyType(
     {
         "component": ("velocity", "b", "temperature", "b_turb", "logN"),
+        "blend": ("velocity", "b", "logN"),
+        "covering": ("value",),
         "spectrum": ("fwhm",),
         "region": ("zero_level",),
+        "distortion": ("value",),
     }
 )
+#: Sections whose one number is called "value", and has the section's name as its quantity.
+_VALUE_SECTIONS = ("covering", "distortion")
+#: Tables that a job has once; their numbers are not counted.
+_SINGLE_SECTIONS = ("alpha", "atomic")
 _REFERENCE = re.compile(
-    r"(?P<section>component|spectrum|region)\[(?P<count>[1-9][0-9]{0,8})\]\.(?P<quantity>[A-Za-z_]+)"
+    rf"(?P<section>{'|'.join(_SECTION_KEYS)})\[(?P<count>[1-9][0-9]{{0,8}})\]\.(?P<key>[A-Za-z_]+)"
     r"(?:\[(?P<quote>[\"'])(?P<ion>[^\"'\]]+)(?P=quote)\])?"
 )
 
@@ -104,7 +133,8 @@ _REFERENCE = re.compile(
 class Reference:
     """The name of one number of a job; `str` gives it as the user writes it.
 
-    `index` counts from 0, the text counts from 1. `ion` is None for all quantities but logN.
+    `index` counts from 0, the text counts from 1; it is 0 for alpha and atomic. `quantity` is a key
+    of `QUANTITIES`. `ion` is None for all quantities but the logN of a component.
     """
 
     section: str
@@ -122,38 +152,46 @@ class Reference:
             The text does not follow the grammar. The message says what would.
 
         """
+        if text == "atomic.heavy_magnesium":
+            return cls("atomic", 0, "heavy_magnesium")
         match = _REFERENCE.fullmatch(text)
         if match is None:
             raise ValueError(
                 f"{describe(text)} names no number; write for example component[2].b, "
                 "component[2].logN['Fe II'] or spectrum[1].fwhm"
             )
-        section, quantity, ion = match["section"], match["quantity"], match["ion"]
-        allowed = _SECTION_QUANTITIES[section]
-        if quantity not in allowed:
-            raise ValueError(f"a {section} has no {quantity!r}; it may have {', '.join(allowed)}")
-        if quantity == "logN" and ion is None:
+        section, key, ion = match["section"], match["key"], match["ion"]
+        allowed = _SECTION_KEYS[section]
+        if key not in allowed:
+            raise ValueError(f"a {section} has no {key!r}; it may have {', '.join(allowed)}")
+        needs_ion = section == "component" and key == "logN"
+        if needs_ion and ion is None:
             raise ValueError(f"logN needs an ion: {text}['Fe II']")
-        if quantity != "logN" and ion is not None:
-            raise ValueError(
-                f"{quantity!r} is shared by all ions; write {section}[{match['count']}].{quantity}"
-            )
+        if not needs_ion and ion is not None:
+            owner = "shared by all ions" if section == "component" else f"one number of a {section}"
+            raise ValueError(f"{key!r} is {owner}; write {section}[{match['count']}].{key}")
+        quantity = section if section in _VALUE_SECTIONS else key
         return cls(section, int(match["count"]) - 1, quantity, ion)
+
+    @property
+    def key(self) -> str:
+        """The key that holds the number in its table of the job file."""
+        return "value" if self.section in _VALUE_SECTIONS else self.quantity
 
     @property
     def path(self) -> KeyPath:
         """The key path of the number in the job file."""
-        if self.section == "alpha":
-            return ("alpha", self.quantity)
+        if self.section in _SINGLE_SECTIONS:
+            return (self.section, self.key)
         if self.section == "spectrum":
-            return ("spectrum", self.index, "resolution", self.quantity)
-        path: KeyPath = (self.section, self.index, self.quantity)
+            return ("spectrum", self.index, "resolution", self.key)
+        path: KeyPath = (self.section, self.index, self.key)
         return path if self.ion is None else (*path, self.ion)
 
     def __str__(self) -> str:
-        if self.section == "alpha":
-            return f"alpha.{self.quantity}"
-        name = f"{self.section}[{self.index + 1}].{self.quantity}"
+        if self.section in _SINGLE_SECTIONS:
+            return f"{self.section}.{self.key}"
+        name = f"{self.section}[{self.index + 1}].{self.key}"
         return name if self.ion is None else f'{name}["{self.ion}"]'
 
 
@@ -253,11 +291,7 @@ def checked_as(quantity: str) -> AfterValidator:
     def check(number: Number) -> Number:
         for name, given in (("", number.value), ("min ", number.min), ("max ", number.max)):
             if given is not None and not kind.is_meaningful(given):
-                relation = "at least" if kind.least_included else "above"
-                raise fault(
-                    f"{name}must be {relation} {plain(kind.least)} {kind.unit}, "
-                    f"found {plain(given)}"
-                )
+                raise fault(f"{name}must be {kind.range_text(given)}, found {plain(given)}")
         if number.value is not None and number.is_free:
             lower, upper = number.bounds(quantity)
             if not lower <= number.value <= upper:
@@ -284,7 +318,7 @@ def tie_faults(
     numbers
         All numbers of the job, in the order of the job file.
     sizes
-        How many components, spectra and regions the job has.
+        How many tables each section of the job has.
     unknown
         Section and index of tables whose numbers are not known because they have other faults.
 
@@ -295,12 +329,20 @@ def tie_faults(
             continue
         path = (*reference.path, "same_as")
         size = sizes[target.section]
-        if target.quantity != reference.quantity:
+        if target.section == "distortion":
+            yield Fault(
+                path,
+                f"{target} is a plain number, to which nothing can be tied; give one distortion "
+                "several spectra to make them move together",
+            )
+        elif target.quantity != reference.quantity:
             yield Fault(
                 path,
                 f"{reference.quantity} is tied to {target.quantity} of {target}; a tie joins two "
                 "numbers of the same kind",
             )
+        elif size == 0:
+            yield Fault(path, f"{target} does not exist: the job has no {target.section}")
         elif target.index >= size:
             yield Fault(path, f"{target} does not exist: the last one is {target.section}[{size}]")
         elif target not in numbers and (target.section, target.index) not in unknown:
@@ -336,11 +378,9 @@ def _meaningless_ties(numbers: Mapping[Reference, Number]) -> Iterator[Fault]:
             continue
         kind = QUANTITIES[reference.quantity]
         if value is not None and not (math.isfinite(value) and kind.is_meaningful(value)):
-            relation = "at least" if kind.least_included else "above"
             yield Fault(
                 reference.path,
-                f"the tie gives {plain(value)}; it must be {relation} {plain(kind.least)} "
-                f"{kind.unit}",
+                f"the tie gives {plain(value)}; it must be {kind.range_text(value)}",
             )
 
 

@@ -14,15 +14,10 @@ from typing import Any
 from pydantic import ValidationError
 
 from fathomline.errors import JobError
+from fathomline.job.fields import MAXIMUM_ENTRIES
 from fathomline.job.paths import absolute_path
-from fathomline.job.schema import (
-    MAXIMUM_ENTRIES,
-    SUPPORTED_SCHEMAS,
-    Job,
-    attach,
-    unsupported_schema,
-)
-from fathomline.job.table import Fault, faults_of
+from fathomline.job.schema import SUPPORTED_SCHEMAS, Job, attach, unsupported_schema
+from fathomline.job.table import Fault, faults_of, key_path_text
 from fathomline.job.toml_source import KeyPath, TomlSource, parse_toml
 
 __all__ = ["MAXIMUM_BYTES", "MAXIMUM_FAULTS", "build_job", "parse_job", "read_job"]
@@ -33,9 +28,11 @@ MAXIMUM_BYTES = 5_000_000
 #: More faults than this are only counted.
 MAXIMUM_FAULTS = 100
 
-_ARRAYS = ("spectrum", "region", "component", "distortion", "blend")
-_TABLES = ("absorber", "atomic", "alpha", "fit", "structure", "budget")
-_FILE_KEYS = ("file", "error_file", "continuum_file")
+#: Keys that hold the name of a file, by the array of tables that has them.
+_FILE_KEYS: Mapping[str, tuple[tuple[str, ...], ...]] = {
+    "spectrum": (("file",), ("error_file",), ("continuum_file",), ("resolution", "table")),
+    "distortion": (("file",),),
+}
 
 
 def read_job(path: str | os.PathLike[str], *, check_files: bool = True) -> Job:
@@ -148,28 +145,38 @@ def _checked(data: Mapping[str, Any], source: TomlSource, check_files: bool) -> 
     return attach(job, source)
 
 
-def _file_faults(data: Mapping[str, Any], folder: Path) -> Iterator[Fault]:
+def _file_faults(data: Mapping[str, Any], base: Path) -> Iterator[Fault]:
     """Data files that do not exist; looks at raw data, so that other faults do not hide these."""
-    entries = data.get("spectrum")
-    if not isinstance(entries, list) or len(entries) > MAXIMUM_ENTRIES:
+    for section, keys in _FILE_KEYS.items():
+        entries = data.get(section)
+        if not isinstance(entries, list) or len(entries) > MAXIMUM_ENTRIES:
+            continue
+        for index in range(len(entries)):
+            for key in keys:
+                yield from _absent_path(data, (section, index, *key), base)
+    yield from _absent_path(data, ("atomic", "folder"), base, folder=True)
+
+
+def _absent_path(data: Any, path: KeyPath, base: Path, *, folder: bool = False) -> Iterator[Fault]:
+    """The fault of a file or folder that a key names, and that does not exist."""
+    for key in path:
+        if isinstance(key, str):
+            data = data.get(key) if isinstance(data, Mapping) else None
+        else:
+            data = data[key]
+    if not isinstance(data, str) or not data.strip():
         return
-    for index, entry in enumerate(entries):
-        for key in _FILE_KEYS if isinstance(entry, Mapping) else ():
-            text = entry.get(key)
-            if not isinstance(text, str) or not text.strip():
-                continue
-            path: KeyPath = ("spectrum", index, key)
-            try:
-                file = absolute_path(text, folder)
-            except ValueError as error:
-                yield Fault(path, str(error))
-                continue
-            try:
-                exists = file.is_file()
-            except (OSError, ValueError):
-                exists = False  # a name that no file can have
-            if not exists:
-                yield Fault(path, f"no such file: {str(file)!r}")
+    try:
+        target = absolute_path(data, base)
+    except ValueError as error:
+        yield Fault(path, str(error))
+        return
+    try:
+        exists = target.is_dir() if folder else target.is_file()
+    except (OSError, ValueError):
+        exists = False  # a name that no file can have
+    if not exists:
+        yield Fault(path, f"no such {'folder' if folder else 'file'}: {str(target)!r}")
 
 
 def _in_order(faults: list[Fault], source: TomlSource) -> list[str]:
@@ -186,39 +193,9 @@ def _line_of(found: Fault, source: TomlSource) -> str:
     path, message = found
     if path == ("schema",) and message == "missing":
         message = f"missing; write schema = {SUPPORTED_SCHEMAS[-1]}"
-    subject = _subject(path)
+    subject = key_path_text(path)
     return (
         f"{source.place(path)}: {subject}: {message}"
         if subject
         else (f"{source.place(path)}: {message}")
     )
-
-
-def _subject(path: KeyPath) -> str:
-    """A key path as the user knows it: ``[[region]] 2 'exclude[1]'``."""
-    if not path:
-        return ""
-    section, *rest = path
-    if section in _ARRAYS:
-        table = f"[[{section}]]"
-        if rest and isinstance(rest[0], int):
-            table += f" {rest[0] + 1}"
-            del rest[0]
-    elif len(path) == 1 and section not in _TABLES:
-        return _shown(section)
-    else:
-        table = f"[{section}]"
-    words = ""
-    for previous, part in zip([None, *rest], rest, strict=False):
-        if isinstance(part, int):
-            words += f"[{part + 1}]"
-        elif previous == "logN":
-            words += f'["{part}"]'  # as references write ions
-        else:
-            words += f".{part}" if words else part
-    return f"{table} {_shown(words)}" if words else table
-
-
-def _shown(words: str | int) -> str:
-    text = str(words)
-    return repr(text if len(text) <= 60 else text[:57] + "...")

@@ -29,6 +29,7 @@ __all__ = [
     "Fault",
     "Flag",
     "Real",
+    "RealOrInfinite",
     "Table",
     "Text",
     "Whole",
@@ -36,6 +37,7 @@ __all__ = [
     "describe",
     "fault",
     "faults_of",
+    "key_path_text",
     "plain",
     "validation_error",
 ]
@@ -43,6 +45,11 @@ __all__ = [
 #: A table with more unknown keys than this is not a job; the rest are only counted.
 _UNKNOWN_KEYS_SHOWN = 20
 _LARGEST_WHOLE = 2**63 - 1
+_ARRAYS = (
+    *("spectrum", "distortion", "region", "component", "blend", "covering"),
+    "atomic.override",
+)
+_TABLES = ("absorber", "atomic", "alpha", "fit", "structure", "budget")
 
 
 class Fault(NamedTuple):
@@ -75,6 +82,38 @@ def describe(value: object) -> str:
     if isinstance(value, datetime.date | datetime.time):
         return "a date or time"
     return f"a value of type {type(value).__name__}"
+
+
+def key_path_text(path: KeyPath) -> str:
+    """A key path as the user knows it: ``[[region]] 2 'exclude[1]'``."""
+    if not path:
+        return ""
+    section, *rest = path
+    if path[:2] == ("atomic", "override"):
+        section, rest = "atomic.override", rest[1:]
+    if section in _ARRAYS:
+        table = f"[[{section}]]"
+        if rest and isinstance(rest[0], int):
+            table += f" {rest[0] + 1}"
+            del rest[0]
+    elif len(path) == 1 and section not in _TABLES:
+        return _shown(section)
+    else:
+        table = f"[{section}]"
+    words = ""
+    for previous, part in zip([None, *rest], rest, strict=False):
+        if isinstance(part, int):
+            words += f"[{part + 1}]"
+        elif previous == "logN" and section == "component":
+            words += f'["{part}"]'  # as references write ions
+        else:
+            words += f".{part}" if words else part
+    return f"{table} {_shown(words)}" if words else table
+
+
+def _shown(words: str | int) -> str:
+    text = str(words)
+    return repr(text if len(text) <= 60 else text[:57] + "...")
 
 
 def fault(message: str) -> PydanticCustomError:
@@ -115,6 +154,11 @@ def _real(value: object) -> float:
     return number
 
 
+def _real_or_infinite(value: object) -> float:
+    # A whole number too large for a float is a slip of the keyboard, not infinity.
+    return value if isinstance(value, float) and math.isinf(value) else _real(value)
+
+
 def _whole(value: object) -> int:
     if isinstance(value, bool) or not isinstance(value, int):
         raise fault(f"expected a whole number, found {describe(value)}")
@@ -141,6 +185,8 @@ def _text(value: object) -> str:
 
 #: A finite float; whole numbers are converted, booleans and text refused.
 Real = Annotated[float, BeforeValidator(_real)]
+#: Like `Real`, but ``inf`` and ``-inf`` are accepted as well.
+RealOrInfinite = Annotated[float, BeforeValidator(_real_or_infinite)]
 #: An int of at most 63 bits; booleans and floats are refused.
 Whole = Annotated[int, BeforeValidator(_whole)]
 #: A bool; numbers and text are refused.

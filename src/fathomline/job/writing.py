@@ -13,8 +13,11 @@ from pathlib import Path
 from typing import Any
 
 from fathomline.errors import JobError
+from fathomline.job.absorption_tables import Region
+from fathomline.job.atomic_tables import Atomic
+from fathomline.job.instrument_tables import Distortion, Resolution
 from fathomline.job.number import Number
-from fathomline.job.schema import Job, Region, Resolution
+from fathomline.job.schema import Job
 from fathomline.job.table import Table
 
 __all__ = ["job_to_data", "job_to_toml", "write_job"]
@@ -39,7 +42,12 @@ def job_to_toml(job: Job) -> str:
     blocks: list[list[str]] = [[]]
     for key, value in job_to_data(job).items():
         if isinstance(value, dict):
-            blocks.append([f"[{key}]", *_assignments(value)])
+            arrays = {k: v for k, v in value.items() if _is_array_of_tables(v)}
+            own = {k: v for k, v in value.items() if k not in arrays}
+            if own or not arrays:
+                blocks.append([f"[{key}]", *_assignments(own)])
+            for name, entries in arrays.items():
+                blocks += [[f"[[{key}.{name}]]", *_assignments(entry)] for entry in entries]
         elif isinstance(value, list):
             blocks += [[f"[[{key}]]", *_assignments(entry)] for entry in value]
         else:
@@ -50,8 +58,8 @@ def job_to_toml(job: Job) -> str:
 def write_job(job: Job, path: str | os.PathLike[str]) -> None:
     """Write a job file; an existing file is replaced at once, or left as it is.
 
-    File names of spectra are written as they are in the job: relative ones start at the folder of
-    the new file.
+    File names are written as they are in the job: relative ones start at the folder of the new
+    file.
 
     Raises
     ------
@@ -85,7 +93,16 @@ def _table_data(table: Table) -> dict[str, Any]:
             continue
         data[entry.alias or name] = _data(value)
     if isinstance(table, Resolution) and table.fwhm is not None:
-        data["fwhm"] = _resolution_number(table.fwhm)
+        data["fwhm"] = _known_number(table.fwhm)
+    if isinstance(table, Atomic) and "heavy_magnesium" in data:
+        data["heavy_magnesium"] = _known_number(table.heavy_magnesium)
+    if isinstance(table, Distortion):
+        # The default depends on the kind, and one spectrum is written without brackets.
+        data.pop("value", None)
+        if table.value != table.default_value(table.kind):
+            data["value"] = table.value
+        if len(table.spectra) == 1:
+            data["spectrum"] = table.spectra[0]
     if isinstance(table, Region) and table.zero_level == Number(value=0.0):
         data["zero_level"] = True
     return data
@@ -108,14 +125,18 @@ def _is_plain(number: Number, fixed: bool) -> bool:
     return number.value is not None and number == Number(value=number.value, fixed=fixed)
 
 
-def _resolution_number(number: Number) -> Any:
-    """A FWHM is fixed where nothing is said, other than the numbers of the model."""
+def _known_number(number: Number) -> Any:
+    """A number that is fixed where nothing is said, other than most numbers of the model."""
     if _is_plain(number, fixed=True):
         return number.value
     data = _table_data(number)
     if number.same_as is None:
         data["fixed"] = number.fixed
     return data
+
+
+def _is_array_of_tables(value: object) -> bool:
+    return isinstance(value, list) and all(isinstance(entry, dict) for entry in value)
 
 
 def _assignments(data: Mapping[str, Any]) -> Iterator[str]:

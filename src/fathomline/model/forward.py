@@ -2,28 +2,39 @@
 
 A *segment* is one region in one spectrum. In a segment the normalised flux of a pixel is
 
-    y = p(ξ) · [W e^{−τ}] + y0,     τ = Σ_k Σ_i τ_{k i},
+    y = p(ξ) · [W T] + y0,     T = e^{−τ},     τ = Σ_k Σ_i τ_{k i},
 
 with W the instrument operator (`fathomline.model.instrument`), p a polynomial in Legendre form
 over the window (ξ from −1 to 1), y0 the zero level, and τ the optical depth of every component k
-in every transition i that falls near the window. Residuals are (data − model)/error; Gaussian
-priors add one residual each. Derivatives of τ are collected per free parameter on the fine grid
-and go through W together.
+in every transition i that falls near the window. Light of true wavelength λ is recorded at
+λ(1 + v_d/c), with v_d a sum of coefficients times given functions of the recorded wavelength: the
+fine grid is one of recorded wavelengths, at which the true 1/λ is larger by 1 + v_d/c. Where groups
+of components cover only the part C_g of the source, T = e^{−τ_0} Π_g (1 − C_g + C_g e^{−τ_g}).
+Residuals are (data − model)/error; Gaussian priors add one residual each.
+
+Everything is laid out once, for all segments together, so that an evaluation is a fixed number of
+array operations however many components there are:
+
+* `LineTable` gives τ and its derivatives for every item, that is for every component in every
+  transition of every segment, on fine grids padded to one width;
+* a sparse matrix with one entry for each item and parameter adds these up to the slopes ∂τ/∂free of
+  each segment; its entries carry the chain rule and the ties;
+* W, block-diagonal over the segments, takes e^{−τ} and all slopes to the pixels together.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 from numpy.polynomial import legendre
 from numpy.typing import NDArray
+from scipy.sparse import csr_array
 
 from fathomline.atomic import alpha_variable
-from fathomline.constants import C_KMS, DOPPLER_KMS2, PPM
+from fathomline.constants import C_KMS, C_MS, DOPPLER_KMS2, PPM
 from fathomline.errors import FitError
 from fathomline.model.instrument import (
     InstrumentOperator,
@@ -31,142 +42,21 @@ from fathomline.model.instrument import (
     fine_velocity_grid,
     log_velocity,
 )
+from fathomline.model.layout import Item, Layout
 from fathomline.model.parameters import ParameterSet
-from fathomline.profile import FineGrid, TransitionLines
+from fathomline.model.terms import ComponentTerms, SegmentPrediction, SegmentTerms
+from fathomline.profile import FineGrid, LineItem, LineTable
+from fathomline.spectra import FWHM_PER_SIGMA
 
-__all__ = ["AbsorberModel", "ComponentTerms", "SegmentPrediction", "SegmentTerms"]
+__all__ = ["AbsorberModel"]
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.intp]
 
 _LN10 = math.log(10.0)
-_FWHM_TO_SIGMA = 1.0 / (2.0 * math.sqrt(2.0 * math.log(2.0)))
+_GROWTH = 1.0  # dex that a column density may gain before the wings were merged too boldly
+_ONE, _LOG_COLUMN, _VELOCITY, _ALPHA = range(4)  # factors of the chain rule
 _WIDEST = 1.5  # the fine grid leaves room for a line-spread function this much wider
-
-
-@dataclass(frozen=True, slots=True)
-class ComponentTerms:
-    """Places of a component's parameters in the full vector.
-
-    Either `b` (turbulent broadening, shared by all ions) or `temperature` (thermal, with
-    `b_turb` added in quadrature when given).
-    """
-
-    velocity: int
-    log_columns: dict[str, int]
-    b: int | None = None
-    temperature: int | None = None
-    b_turb: int | None = None
-
-    def widths(self, theta: Array, masses: Array) -> Array:
-        """Doppler parameter, km/s, for each mass in u."""
-        if self.b is not None:
-            return np.full(masses.size, theta[self.b])
-        assert self.temperature is not None
-        square = DOPPLER_KMS2 * theta[self.temperature] / masses
-        if self.b_turb is not None:
-            square = square + theta[self.b_turb] ** 2
-        widths: Array = np.sqrt(square)
-        return widths
-
-    @property
-    def width_parameters(self) -> tuple[int, ...]:
-        """Places of the parameters of the width."""
-        return tuple(p for p in (self.b, self.temperature, self.b_turb) if p is not None)
-
-    def width_slopes(self, theta: Array, masses: Array, b: Array) -> Array:
-        """Derivatives of `b` to the parameters of the width (n_width_parameters, n_lines)."""
-        if self.b is not None:
-            return np.ones((1, b.size))
-        thermal = 0.5 * DOPPLER_KMS2 / (masses * b)
-        if self.b_turb is None:
-            return thermal[None, :]
-        return np.array([thermal, theta[self.b_turb] / b])
-
-
-@dataclass(frozen=True)
-class SegmentTerms:
-    """One region in one spectrum: its pixels, lines and nuisance parameters.
-
-    Attributes
-    ----------
-    region : int
-        Number of the region, from 0.
-    name : str
-        The transition that the region is about.
-    spectrum : str
-        The id of the spectrum.
-    wavelength, edges_low, edges_high : array (n,)
-        Pixel centres and edges, Å.
-    data, error : array (n,)
-        Flux and its error divided by the continuum of the file.
-    good : bool array (n,)
-        Pixels to fit.
-    lines : tuple of (str, TransitionLines)
-        Ion and lines of every transition that can absorb here.
-    continuum : tuple of int
-        Places of the Legendre coefficients; empty for a continuum held at that of the file.
-    zero_level : int or None
-        Place of the zero level, in units of the file's continuum.
-    fwhm : int
-        Place of the FWHM of the line-spread function, km/s.
-    window : (float, float)
-        Limits of the region in km/s, for plots.
-    rest : float
-        Composite rest wavelength of the region's transition, Å.
-
-    """
-
-    region: int
-    name: str
-    spectrum: str
-    wavelength: Array
-    edges_low: Array
-    edges_high: Array
-    data: Array
-    error: Array
-    good: NDArray[np.bool_]
-    lines: tuple[tuple[str, TransitionLines], ...]
-    continuum: tuple[int, ...]
-    zero_level: int | None
-    fwhm: int
-    window: tuple[float, float]
-    rest: float
-
-
-@dataclass(frozen=True, slots=True)
-class SegmentPrediction:
-    """What the model predicts for every pixel of a segment, masked ones included.
-
-    Attributes
-    ----------
-    flux, continuum, residual : array (n,)
-        In units of the file's continuum; the residual is (data − flux)/error, nan where the pixel
-        is not fitted.
-    components : array (n_components, n)
-        Transmission of each component alone, e^{−τ_k} after the instrument.
-
-    """
-
-    flux: Array
-    continuum: Array
-    residual: Array
-    components: Array
-
-
-@dataclass
-class _Workspace:
-    """What a segment keeps between evaluations."""
-
-    fine: FineGrid
-    grid: Array  # the same in km/s about the first pixel
-    operator: InstrumentOperator
-    basis: Array  # Legendre polynomials at the good pixels, (n_good, order + 1)
-    inverse_error: Array
-    data: Array
-    free: NDArray[np.intp]  # free parameters that the segment depends on
-    row: dict[int, int] = field(default_factory=dict)  # full position -> row among `free`
-    sigma: float = math.nan
-    matrix: Any = None  # scipy sparse array
 
 
 class AbsorberModel:
@@ -181,8 +71,15 @@ class AbsorberModel:
         Place of Δα/α (ppm) in the full vector.
     components : sequence of ComponentTerms
     segments : sequence of SegmentTerms
+    coverings : sequence of int
+        Place of the covering factor of each group of components.
+    heavy : int, optional
+        Place of the abundance of heavier isotopes relative to the tables, for the lines that were
+        made with one.
     refine : float
         The fine grid is this factor finer than the sampling rule asks for.
+    sampled_for : array (n_parameters,), optional
+        Values that the sampling rule looks at; default: the start values.
 
     Raises
     ------
@@ -199,23 +96,38 @@ class AbsorberModel:
         components: Sequence[ComponentTerms],
         segments: Sequence[SegmentTerms],
         *,
+        coverings: Sequence[int] = (),
+        heavy: int | None = None,
         refine: float = 1.0,
         sampled_for: Array | None = None,
     ) -> None:
         self.redshift, self.parameters, self.alpha = redshift, parameters, alpha
         self.components, self.segments = tuple(components), tuple(segments)
-        self.refine = refine
+        self.coverings, self.heavy, self.refine = tuple(coverings), heavy, refine
         self.n_evaluations = 0
+        for segment in self.segments:
+            if not segment.good.any():
+                raise FitError(
+                    f"region {segment.region + 1} ({segment.name}) has no good pixel in spectrum "
+                    f"{segment.spectrum!r}"
+                )
         self._priors = parameters.priors()
         theta = parameters.expand(parameters.start) if sampled_for is None else sampled_for
-        self.spacings = tuple(self.required_spacing(theta))
-        self._work = [
-            self._prepare(segment, theta, spacing)
-            for segment, spacing in zip(self.segments, self.spacings, strict=True)
+        self._items = [
+            Item(k, c, component.log_columns[ion], lines)
+            for k, segment in enumerate(self.segments)
+            for c, component in enumerate(self.components)
+            for ion, lines in segment.lines
+            if ion in component.log_columns
         ]
-        counts = [int(segment.good.sum()) for segment in self.segments]
-        self.rows = np.concatenate([[0], np.cumsum(counts)]).astype(int)
-        self.n_data = int(self.rows[-1])
+        self.spacings = tuple(self.required_spacing(theta))
+        self._prepare_grids(theta)
+        self._prepare_lines(theta)
+        self._layout = Layout(
+            parameters, alpha, self.components, self.segments, self._items, self.coverings, heavy
+        )
+        self._prepare_sums()
+        self._prepare_pixels()
 
     def __repr__(self) -> str:
         return (
@@ -228,74 +140,14 @@ class AbsorberModel:
 
     def required_spacing(self, theta: Array) -> list[float]:
         """Fine-grid spacing, km/s, that the sampling rule asks for in each segment."""
-        spacings = []
-        for segment in self.segments:
-            sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
-            needed = [sigma]
-            for component in self.components:
-                for ion, lines in segment.lines:
-                    if ion not in component.log_columns:
-                        continue
-                    b = component.widths(theta, lines.masses)
-                    column = 10.0 ** theta[component.log_columns[ion]]
-                    needed.append(fine_spacing(float(b.min()), sigma, lines.peak_depth(b, column)))
-            spacings.append(min(needed) / self.refine)
-        return spacings
-
-    def _prepare(self, segment: SegmentTerms, theta: Array, spacing: float) -> _Workspace:
-        good = segment.good
-        if not good.any():
-            raise FitError(
-                f"region {segment.region + 1} ({segment.name}) has no good pixel in spectrum "
-                f"{segment.spectrum!r}"
-            )
-        reference = float(segment.wavelength[0])
-        low = log_velocity(segment.edges_low, reference)
-        high = log_velocity(segment.edges_high, reference)
-        sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
-        if self.parameters.ratio[segment.fwhm] != 0.0:
-            sigma *= _WIDEST
-        grid = fine_velocity_grid(float(low.min()), float(high.max()), sigma, spacing)
-        used = [self.alpha, segment.fwhm, *segment.continuum]
-        if segment.zero_level is not None:
-            used.append(segment.zero_level)
-        for component in self.components:
-            used += [component.velocity, *component.width_parameters]
-            used += [
-                component.log_columns[ion]
-                for ion, _ in segment.lines
-                if ion in component.log_columns
-            ]
-        moving = [p for p in used if self.parameters.ratio[p] != 0.0]
-        free = np.unique(self.parameters.index[moving]).astype(np.intp)
-        place = {int(k): row for row, k in enumerate(free)}
-        return _Workspace(
-            fine=FineGrid(
-                start=math.log(reference) + float(grid[0]) / C_KMS,
-                step=spacing / C_KMS,
-                inverse=np.exp(-grid / C_KMS) / reference,
-            ),
-            grid=grid,
-            operator=InstrumentOperator(low[good], high[good], grid),
-            basis=self._basis(segment)[good],
-            inverse_error=1.0 / segment.error[good],
-            data=segment.data[good],
-            free=free,
-            row={p: place[int(self.parameters.index[p])] for p in moving},
-        )
-
-    def _basis(self, segment: SegmentTerms) -> Array:
-        low, high = segment.wavelength[0], segment.wavelength[-1]
-        span = max(high - low, np.finfo(float).tiny)
-        xi = 2.0 * (segment.wavelength - low) / span - 1.0
-        order = max(len(segment.continuum) - 1, 0)
-        return legendre.legvander(xi, order)
-
-    def _polynomial(self, segment: SegmentTerms, basis: Array, theta: Array) -> Array:
-        if not segment.continuum:
-            return np.ones(basis.shape[0])
-        value: Array = basis @ theta[list(segment.continuum)]
-        return value
+        sigma = [self._width(segment, theta)[0] for segment in self.segments]
+        needed = list(sigma)
+        for item in self._items:
+            b = self.components[item.component].widths(theta, item.lines.masses)
+            peak = item.lines.peak_depth(b, 10.0 ** theta[item.column])
+            spacing = fine_spacing(float(b.min()), sigma[item.segment], peak)
+            needed[item.segment] = min(needed[item.segment], spacing)
+        return [spacing / self.refine for spacing in needed]
 
     def resampled(self, free: Array, *, refine: float = 1.0) -> AbsorberModel | None:
         """The same model on a finer grid, when the values `free` need one; else None.
@@ -312,9 +164,183 @@ class AbsorberModel:
             self.alpha,
             self.components,
             self.segments,
+            coverings=self.coverings,
+            heavy=self.heavy,
             refine=self.refine * refine,
             sampled_for=theta,
         )
+
+    def _width(self, segment: SegmentTerms, theta: Array) -> tuple[float, float]:
+        """Smallest scale and reach (in σ) of the line-spread function of a segment, km/s."""
+        if segment.line_spread is not None:
+            return segment.line_spread.finest, segment.line_spread.reach / 6.0
+        sigma = segment.sigma(float(theta[segment.fwhm]))
+        return float(sigma.min()), float(sigma.max())
+
+    def _prepare_grids(self, theta: Array) -> None:
+        """Fine grids, padded to one width, and the instrument operator of each segment."""
+        self._grids: list[FineGrid] = []
+        self._velocities: list[Array] = []
+        self._operators: list[InstrumentOperator] = []
+        for segment, spacing in zip(self.segments, self.spacings, strict=True):
+            reference = float(segment.wavelength[0])
+            low = log_velocity(segment.edges_low, reference)
+            high = log_velocity(segment.edges_high, reference)
+            sigma = self._width(segment, theta)[1]
+            if self.parameters.ratio[segment.fwhm] != 0.0:
+                sigma *= _WIDEST
+            grid = fine_velocity_grid(float(low.min()), float(high.max()), sigma, spacing)
+            self._velocities.append(grid)
+            self._grids.append(
+                FineGrid(math.log(reference) + float(grid[0]) / C_KMS, spacing / C_KMS, grid.size)
+            )
+            good = segment.good
+            self._operators.append(InstrumentOperator(low[good], high[good], grid))
+        width = max(grid.size for grid in self._grids)
+        self._inverse = np.array(
+            [np.pad(grid.inverse, (0, width - grid.size), mode="edge") for grid in self._grids]
+        )
+        self._fwhm: tuple[float, ...] = ()
+        self._matrix: Any = None
+        self._bases = [
+            [(k, t, np.pad(b, (0, width - b.size))) for t, b in self._terms(segment, grid)]
+            for k, (segment, grid) in enumerate(zip(self.segments, self._grids, strict=True))
+        ]
+
+    @staticmethod
+    def _terms(segment: SegmentTerms, grid: FineGrid) -> list[tuple[int, Array]]:
+        recorded = 1.0 / grid.inverse
+        return [(term.position, term.basis(recorded)) for term in segment.distortions]
+
+    def _prepare_lines(self, theta: Array) -> None:
+        """The line table, and where each item and line finds its parameters."""
+        components, items = self.components, self._items
+        self._table = LineTable(
+            [
+                LineItem(
+                    item.segment,
+                    item.lines,
+                    item.lines.wings_may_merge(
+                        components[item.component].widths(theta, item.lines.masses),
+                        10.0 ** (theta[item.column] + _GROWTH),
+                    ),
+                )
+                for item in items
+            ],
+            self._grids,
+        )
+        self._velocity = np.array([components[i.component].velocity for i in items], dtype=np.intp)
+        self._column = np.array([i.column for i in items], dtype=np.intp)
+
+        def places(name: str) -> Indices:
+            # one past the end reads a zero: that item has no such parameter
+            found = [getattr(components[item.component], name) for item in items]
+            end = len(self.parameters)
+            places = np.array([end if p is None else p for p in found], dtype=np.intp)
+            return places[self._table.item]
+
+        self._b, self._temperature, self._b_turb = (
+            places(name) for name in ("b", "temperature", "b_turb")
+        )
+        self._stretch = np.array(
+            [
+                1.0 + (self.redshift if (z := components[i.component].redshift) is None else z)
+                for i in items
+            ]
+        )
+        none = len(self.coverings)
+        groups = [components[i.component].covering for i in items]
+        self._group = np.array([none if g is None else g for g in groups], dtype=np.intp)
+        self._turbulent = bool((self._b_turb < len(self.parameters)).any())
+
+    def _prepare_sums(self) -> None:
+        """The sparse matrix from the rows of the line table to the slopes of each segment."""
+        layout, n_items = self._layout, len(self._items)
+        n = layout.width
+        n_blocks = 4 + self._turbulent + self._table.has_heavy
+        entries: list[tuple[int, int, float, int, int]] = []  # row, column, ratio, kind, place
+        for i, item in enumerate(self._items):
+            component = self.components[item.component]
+            base = item.segment * n
+            entries.append((base, i, 1.0, _ONE, 0))
+            if self.segments[item.segment].distortions:
+                entries.append((base + n - 2, n_items + i, 1.0, _ONE, 0))
+            width = component.width_parameters
+            targets = [
+                (0, item.column, _LOG_COLUMN),
+                (1, component.velocity, _VELOCITY),
+                (2, self.alpha, _ALPHA),
+                *((3 + j, p, _ONE) for j, p in enumerate(width)),
+            ]
+            if self.heavy is not None and self._table.has_heavy:
+                targets.append((n_blocks - 1, self.heavy, _ONE))
+            for block, position, kind in targets:
+                ratio = float(self.parameters.ratio[position])
+                if ratio != 0.0:
+                    row = base + layout.row(item.segment, position)
+                    entries.append((row, block * n_items + i, ratio, kind, position))
+        entries.sort(key=lambda entry: entry[:2])
+        rows = np.array([entry[0] for entry in entries], dtype=np.intp)
+        columns = np.array([entry[1] for entry in entries], dtype=np.intp)
+        self._sum_ratio = np.array([entry[2] for entry in entries])
+        self._sum_kind = np.array([entry[3] for entry in entries], dtype=np.intp)
+        self._sum_place = np.array([entry[4] for entry in entries], dtype=np.intp)
+        n_rows = len(self.segments) * n
+        pointers = np.concatenate([[0], np.cumsum(np.bincount(rows, minlength=n_rows))])
+        self._sum = csr_array(
+            (self._sum_ratio.copy(), columns, pointers), shape=(n_rows, n_blocks * n_items)
+        )
+
+    def _prepare_pixels(self) -> None:
+        """Data, polynomials and target columns of all fitted pixels."""
+        segments, layout = self.segments, self._layout
+        counts = [int(segment.good.sum()) for segment in segments]
+        self.rows = np.concatenate([[0], np.cumsum(counts)]).astype(int)
+        self.n_data = int(self.rows[-1])
+        self._data = np.concatenate([segment.data[segment.good] for segment in segments])
+        self._weight = np.concatenate([1.0 / segment.error[segment.good] for segment in segments])
+        self._segment = np.repeat(np.arange(len(segments)), counts)
+        orders = max((len(segment.continuum) for segment in segments), default=0)
+        end = len(self.parameters)
+        places = np.full((orders, len(segments)), end, dtype=np.intp)
+        basis = np.zeros((orders, self.n_data))
+        for k, segment in enumerate(segments):
+            places[: len(segment.continuum), k] = segment.continuum
+            here = slice(self.rows[k], self.rows[k + 1])
+            values = self._basis(segment)[segment.good].T
+            basis[: len(segment.continuum), here] = values[: len(segment.continuum)]
+        self._continuum_places, self._continuum_basis = places, basis
+        self._held = np.array([0.0 if segment.continuum else 1.0 for segment in segments])
+        self._zero_places = np.array(
+            [end if s.zero_level is None else s.zero_level for s in segments], dtype=np.intp
+        )
+        pixel = np.arange(self.n_data)
+
+        def target(positions: Sequence[int | None]) -> tuple[Indices, Indices, Array]:
+            """Pixels, local columns and tie ratios of one parameter of each segment."""
+            known = [None if p is None or p == end else int(p) for p in positions]
+            ratio = [0.0 if p is None else float(self.parameters.ratio[p]) for p in known]
+            return pixel, layout.rows(known)[self._segment], np.array(ratio)[self._segment]
+
+        self._continuum_targets = [target(list(row)) for row in places]
+        self._zero_target = target(list(self._zero_places))
+        self._fwhm_target = target([segment.fwhm for segment in segments])
+        self._fwhm_free = any(self.parameters.ratio[s.fwhm] != 0.0 for s in segments)
+        sources, targets = [], []
+        n_free = len(self.parameters.free_names)
+        for k, free in enumerate(layout.free):
+            own = np.arange(self.rows[k], self.rows[k + 1])[:, None]
+            sources.append((own * layout.width + np.arange(1, free.size + 1)).ravel())
+            targets.append((own * n_free + free).ravel())
+        self._sources, self._targets = np.concatenate(sources), np.concatenate(targets)
+
+    def _basis(self, segment: SegmentTerms) -> Array:
+        """Legendre polynomials at all pixels of a segment (n, order + 1)."""
+        low, high = segment.wavelength[0], segment.wavelength[-1]
+        span = max(high - low, np.finfo(float).tiny)
+        xi = 2.0 * (segment.wavelength - low) / span - 1.0
+        basis: Array = legendre.legvander(xi, max(len(segment.continuum) - 1, 0))
+        return basis
 
     # -- evaluation -------------------------------------------------------------------------
 
@@ -322,161 +348,237 @@ class AbsorberModel:
         """Residuals (n_data + n_priors,): (data − model)/error, then the priors."""
         theta = self.parameters.expand(free)
         self.n_evaluations += 1
-        parts = [
-            (work.data - self._segment_flux(segment, work, theta)) * work.inverse_error
-            for segment, work in zip(self.segments, self._work, strict=True)
-        ]
-        parts.append(self._prior_residuals(theta))
-        return np.concatenate(parts)
+        rows, _ = self._line_rows(theta, derivatives=False)
+        transmission = self._transmission(rows[0], theta)
+        smooth = self._instrument(theta) @ transmission.ravel()
+        return self._residuals(theta, self._polynomial(theta) * smooth)
 
-    def _prior_residuals(self, theta: Array) -> Array:
-        return np.array([(theta[i] - prior.mean) / prior.sigma for i, prior in self._priors])
-
-    def _segment_flux(self, segment: SegmentTerms, work: _Workspace, theta: Array) -> Array:
-        tau = self._depth(segment, work.fine, theta)
-        sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
-        if sigma != work.sigma:
-            work.matrix, work.sigma = work.operator.matrix(sigma), sigma
-        flux = self._polynomial(segment, work.basis, theta) * (work.matrix @ np.exp(-tau))
-        if segment.zero_level is not None:
-            flux = flux + theta[segment.zero_level]
-        result: Array = flux
-        return result
-
-    def _scale(self, component: ComponentTerms, theta: Array) -> float:
-        return float((1.0 + self.redshift) * (1.0 + theta[component.velocity] / C_KMS))
-
-    def _depth(
-        self,
-        segment: SegmentTerms,
-        grid: FineGrid,
-        theta: Array,
-        components: Sequence[ComponentTerms] | None = None,
-    ) -> Array:
-        x = alpha_variable(theta[self.alpha])
-        tau = np.zeros(grid.inverse.size)
-        for component in self.components if components is None else components:
-            s = self._scale(component, theta)
-            for ion, lines in segment.lines:
-                position = component.log_columns.get(ion)
-                if position is not None:
-                    b = component.widths(theta, lines.masses)
-                    for part, values in lines.parts(grid, s, b, 10.0 ** theta[position], x):
-                        tau[part] += values[0]
-        return tau
+    def _residuals(self, theta: Array, absorbed: Array) -> Array:
+        zero = np.append(theta, 0.0)[self._zero_places][self._segment]
+        return np.concatenate(
+            [(self._data - absorbed - zero) * self._weight, self._prior_residuals(theta)]
+        )
 
     def residuals_and_jacobian(self, free: Array) -> tuple[Array, Array]:
         """Residuals as in `residuals` and their Jacobian (n_data + n_priors, n_free)."""
         theta = self.parameters.expand(free)
         self.n_evaluations += 1
-        n_rows = self.n_data + len(self._priors)
-        residual = np.empty(n_rows)
-        jacobian = np.zeros((n_rows, free.size))
-        for k, (segment, work) in enumerate(zip(self.segments, self._work, strict=True)):
-            rows = slice(self.rows[k], self.rows[k + 1])
-            flux, derivative = self._segment_jacobian(segment, work, theta)
-            residual[rows] = (work.data - flux) * work.inverse_error
-            jacobian[rows, work.free] = derivative * -work.inverse_error[:, None]
-        residual[self.n_data :] = self._prior_residuals(theta)
+        slopes = self._transmission_slopes(theta)
+        n_local = self._layout.width
+        transmission = slopes[:, 0].ravel()
+        stacked = np.ascontiguousarray(slopes.transpose(0, 2, 1)).reshape(-1, n_local)
+        local: Array = self._instrument(theta) @ stacked  # (n_data, n_local)
+        smooth = local[:, 0].copy()
+        if self._fwhm_free:
+            pixel, column, ratio = self._fwhm_target
+            local[pixel, column] += ratio / FWHM_PER_SIGMA * (self._by_sigma @ transmission)
+        polynomial = self._polynomial(theta)
+        local *= polynomial[:, None]
+        for basis, (pixel, column, ratio) in zip(
+            self._continuum_basis, self._continuum_targets, strict=True
+        ):
+            local[pixel, column] += ratio * basis * smooth
+        pixel, column, ratio = self._zero_target
+        local[pixel, column] += ratio
+        local *= -self._weight[:, None]
+        residual = self._residuals(theta, polynomial * smooth)
+        jacobian = np.zeros((residual.size, free.size))
+        jacobian.ravel()[self._targets] = local.ravel()[self._sources]
         for row, (i, prior) in enumerate(self._priors, start=self.n_data):
             jacobian[row, self.parameters.index[i]] += self.parameters.ratio[i] / prior.sigma
         return residual, jacobian
 
-    def _segment_jacobian(
-        self, segment: SegmentTerms, work: _Workspace, theta: Array
-    ) -> tuple[Array, Array]:
-        """Flux (n_good,) and its derivatives (n_good, n_free of the segment)."""
-        tau, slopes = self._depth_slopes(segment, work, theta)
-        transmission = np.exp(-tau)
-        sigma = theta[segment.fwhm] * _FWHM_TO_SIGMA
-        fwhm_row = work.row.get(segment.fwhm)
-        if fwhm_row is not None:
-            work.matrix, by_sigma = work.operator.matrix_with_derivative(sigma)
-            work.sigma = sigma
-        elif sigma != work.sigma:
-            work.matrix, work.sigma = work.operator.matrix(sigma), sigma
-        slopes *= -transmission
-        smooth: Array = work.matrix @ transmission
-        derivative: Array = work.matrix @ slopes.T
-        ratio = self.parameters.ratio
-        if fwhm_row is not None:
-            derivative[:, fwhm_row] += (
-                ratio[segment.fwhm] * _FWHM_TO_SIGMA * (by_sigma @ transmission)
-            )
-        polynomial = self._polynomial(segment, work.basis, theta)
-        derivative *= polynomial[:, None]
-        for order, position in enumerate(segment.continuum):
-            row = work.row.get(position)
-            if row is not None:
-                derivative[:, row] += ratio[position] * work.basis[:, order] * smooth
-        flux = polynomial * smooth
-        if segment.zero_level is not None:
-            flux = flux + theta[segment.zero_level]
-            row = work.row.get(segment.zero_level)
-            if row is not None:
-                derivative[:, row] += ratio[segment.zero_level]
-        return flux, derivative
+    def _prior_residuals(self, theta: Array) -> Array:
+        return np.array([(theta[i] - prior.mean) / prior.sigma for i, prior in self._priors])
 
-    def _depth_slopes(
-        self, segment: SegmentTerms, work: _Workspace, theta: Array
-    ) -> tuple[Array, Array]:
-        """τ (n_fine,) and ∂τ/∂free (n_free of the segment, n_fine)."""
-        ratio, rows = self.parameters.ratio, work.row
-        dalpha = theta[self.alpha] * PPM
-        x = alpha_variable(theta[self.alpha])
-        x_by_alpha = 2.0 * (1.0 + dalpha) * PPM
-        tau = np.zeros(work.grid.size)
-        slopes = np.zeros((work.free.size, work.grid.size))
-        for component in self.components:
-            s = self._scale(component, theta)
-            # what the rows of `TransitionLines.parts` contribute to, and by what factor
-            targets: list[tuple[int, int, float]] = [
-                (1, component.velocity, 1.0 / (C_KMS + theta[component.velocity])),
-                (2, self.alpha, x_by_alpha),
-                *((3 + i, p, 1.0) for i, p in enumerate(component.width_parameters)),
+    def _polynomial(self, theta: Array) -> Array:
+        """Continuum of every fitted pixel."""
+        coefficients = np.append(theta, 0.0)[self._continuum_places]
+        value = self._held[self._segment]
+        for basis, coefficient in zip(self._continuum_basis, coefficients, strict=True):
+            value = value + basis * coefficient[self._segment]
+        return value
+
+    def _instrument(self, theta: Array) -> Any:
+        """Block-diagonal operator (n_data, n_segments × width); rebuilt when a FWHM moved."""
+        fwhm = tuple(float(theta[s.fwhm]) for s in self.segments)
+        if fwhm != self._fwhm:
+            built = [
+                self._operator(segment, operator, value, segment.good)
+                for segment, operator, value in zip(
+                    self.segments, self._operators, fwhm, strict=True
+                )
             ]
-            for ion, lines in segment.lines:
-                position = component.log_columns.get(ion)
-                if position is None:
-                    continue
-                b = component.widths(theta, lines.masses)
-                by_width = component.width_slopes(theta, lines.masses, b)
-                wanted = [
-                    (i, rows[p], factor * ratio[p])
-                    for i, p, factor in (*targets, (0, position, _LN10))
-                    if p in rows
-                ]
-                for part, values in lines.parts(
-                    work.fine, s, b, 10.0 ** theta[position], x, by_width
-                ):
-                    tau[part] += values[0]
-                    for i, row, factor in wanted:
-                        slopes[row, part] += factor * values[i]
-        return tau, slopes
+            self._matrix = self._block_diagonal([matrix for matrix, _ in built])
+            self._by_sigma = self._block_diagonal([slope for _, slope in built])
+            self._fwhm = fwhm
+        return self._matrix
+
+    @staticmethod
+    def _operator(
+        segment: SegmentTerms,
+        operator: InstrumentOperator,
+        fwhm: float,
+        pixels: NDArray[np.bool_] | slice,
+    ) -> tuple[csr_array, csr_array]:
+        """Operator of a segment and its derivative to σ; zero for a tabulated profile."""
+        profile = segment.line_spread
+        if profile is None:
+            return operator.matrix_with_derivative(segment.sigma(fwhm)[pixels])
+        wavelength = segment.wavelength[pixels]
+        matrix = operator.tabulated(
+            lambda v, pixel: profile.cumulative(v, wavelength[pixel]),
+            profile.reach,
+            profile.reach,
+        )
+        return matrix, csr_array(matrix.shape)
+
+    def _block_diagonal(self, blocks: Sequence[csr_array]) -> csr_array:
+        width = self._table.width
+        data = np.concatenate([block.data for block in blocks])
+        indices = np.concatenate([block.indices + k * width for k, block in enumerate(blocks)])
+        counts = np.concatenate([np.diff(block.indptr) for block in blocks])
+        pointers = np.concatenate([[0], np.cumsum(counts)])
+        return csr_array((data, indices, pointers), shape=(self.n_data, len(blocks) * width))
+
+    def _line_rows(self, theta: Array, *, derivatives: bool) -> tuple[Array, Array | None]:
+        """Rows of the line table (n_rows, n_items, width), and the distortion velocity."""
+        extended = np.append(theta, 0.0)
+        masses = self._table.masses
+        b_plain, b_turb = extended[self._b], extended[self._b_turb]
+        b = np.sqrt(b_plain**2 + DOPPLER_KMS2 * extended[self._temperature] / masses + b_turb**2)
+        slopes: Array | None = None
+        if derivatives:
+            turbulent_only = self._b < len(theta)
+            slopes = np.where(turbulent_only, 1.0, 0.5 * DOPPLER_KMS2 / (masses * b))[None]
+            if self._turbulent:
+                slopes = np.concatenate([slopes, (b_turb / b)[None]])
+        s = self._stretch * (1.0 + theta[self._velocity] / C_KMS)
+        column = 10.0 ** theta[self._column]
+        x = alpha_variable(theta[self.alpha])
+        velocity = self._distortion(theta)
+        inverse = self._inverse if velocity is None else self._inverse * (1.0 + velocity / C_MS)
+        margin = 0.0 if velocity is None else float(np.abs(velocity).max()) / C_MS
+        heavy = 1.0 if self.heavy is None else float(theta[self.heavy])
+        rows = self._table.evaluate(inverse, s, column, b, x, slopes, margin=margin, heavy=heavy)
+        return rows, velocity
+
+    def _distortion(self, theta: Array) -> Array | None:
+        """Distortion velocity on the fine grids (n_segments, width), m/s; None without terms."""
+        if not any(self._bases):
+            return None
+        velocity = np.zeros_like(self._inverse)
+        for terms in self._bases:
+            for k, position, basis in terms:
+                velocity[k] += theta[position] * basis
+        return velocity
+
+    def _depths(self, tau: Array) -> Array:
+        """Sum of the items' optical depths in each segment (n_segments, width)."""
+        total = np.zeros((len(self.segments), self._table.width))
+        np.add.at(total, self._table.grid_of_item, tau)
+        return total
+
+    def _covered(self, tau: Array, theta: Array) -> tuple[Array, Array]:
+        """1 − C_g + C_g e^{−τ_g} and e^{−τ_g} of each group (n_groups, n_segments, width)."""
+        depth = np.zeros((len(self.coverings), *self._inverse.shape))
+        inside = self._group < len(self.coverings)
+        np.add.at(depth, (self._group[inside], self._table.grid_of_item[inside]), tau[inside])
+        through = np.exp(-depth)
+        part = theta[list(self.coverings)][:, None, None]
+        return 1.0 - part + part * through, through
+
+    def _transmission(self, tau: Array, theta: Array) -> Array:
+        """Transmission on the fine grids (n_segments, width)."""
+        if not self.coverings:
+            return np.exp(-self._depths(tau))
+        plain = np.where((self._group == len(self.coverings))[:, None], tau, 0.0)
+        covered, _ = self._covered(tau, theta)
+        transmission: Array = np.exp(-self._depths(plain)) * covered.prod(axis=0)
+        return transmission
+
+    def _transmission_slopes(self, theta: Array) -> Array:
+        """T and ∂T/∂free of each segment (n_segments, n_local, width); see `Layout`."""
+        rows, velocity = self._line_rows(theta, derivatives=True)
+        covered = through = None
+        if self.coverings:
+            transmission = self._transmission(rows[0], theta)
+            covered, through = self._covered(rows[0], theta)
+            # −∂ln T/∂τ of an item is 1, or C_g e^{−τ_g}/(1 − C_g + C_g e^{−τ_g}) in a group
+            part = theta[list(self.coverings)][:, None, None]
+            weight = np.concatenate([part * through / covered, np.ones((1, *covered.shape[1:]))])
+            rows = rows * weight[self._group, self._table.grid_of_item]
+        dalpha = theta[self.alpha] * PPM
+        factors = np.array([1.0, _LN10, 0.0, 2.0 * (1.0 + dalpha) * PPM])[self._sum_kind]
+        moving = self._sum_kind == _VELOCITY
+        factors[moving] = 1.0 / (C_KMS + theta[self._sum_place[moving]])
+        self._sum.data[:] = self._sum_ratio * factors
+        n_rows, n_items, width = rows.shape
+        slopes: Array = (self._sum @ rows.reshape(n_rows * n_items, width)).reshape(
+            len(self.segments), self._layout.width, width
+        )
+        if velocity is not None:
+            self._add_distortions(slopes, velocity)
+        if not self.coverings:
+            transmission = np.exp(-slopes[:, 0])
+        slopes[:, 1:] *= -transmission[:, None]
+        slopes[:, 0] = transmission
+        if covered is not None and through is not None:
+            for g, position in enumerate(self.coverings):
+                ratio = self.parameters.ratio[position]
+                change = ratio * transmission * (through[g] - 1.0) / covered[g]
+                for k in range(len(self.segments)):
+                    row = self._layout.row_if_used(k, position)
+                    if row is not None:
+                        slopes[k, row] += change[k]
+        return slopes
+
+    def _add_distortions(self, slopes: Array, velocity: Array) -> None:
+        for terms in self._bases:
+            for k, position, basis in terms:
+                row = self._layout.row(k, position)
+                if row < self._layout.width - 1:
+                    by_shift = slopes[k, -2] / (C_MS + velocity[k])
+                    slopes[k, row] += self.parameters.ratio[position] * basis * by_shift
 
     # -- for tables and plots ---------------------------------------------------------------
 
     def predict(self, free: Array) -> list[SegmentPrediction]:
         """What the model predicts for every pixel of every segment."""
         theta = self.parameters.expand(free)
+        rows, _ = self._line_rows(theta, derivatives=False)
+        tau = rows[0]
+        transmission = self._transmission(tau, theta)
         predictions = []
-        for segment, work in zip(self.segments, self._work, strict=True):
+        for k, segment in enumerate(self.segments):
+            size = self._grids[k].size
             reference = float(segment.wavelength[0])
-            operator = InstrumentOperator(
+            everywhere = InstrumentOperator(
                 log_velocity(segment.edges_low, reference),
                 log_velocity(segment.edges_high, reference),
-                work.grid,
-            ).matrix(theta[segment.fwhm] * _FWHM_TO_SIGMA)
-            alone = [
-                operator @ np.exp(-self._depth(segment, work.fine, theta, [component]))
-                for component in self.components
-            ]
-            continuum = self._polynomial(segment, self._basis(segment), theta)
-            flux = continuum * (operator @ np.exp(-self._depth(segment, work.fine, theta)))
+                self._velocities[k],
+            )
+            operator = self._operator(segment, everywhere, float(theta[segment.fwhm]), slice(None))
+            alone = np.zeros((len(self.components), size))
+            for i, item in enumerate(self._items):
+                if item.segment == k:
+                    alone[item.component] += tau[i, :size]
+            single = np.exp(-alone)
+            for c, component in enumerate(self.components):
+                if component.covering is not None:
+                    part = theta[self.coverings[component.covering]]
+                    single[c] = 1.0 - part + part * single[c]
+            continuum = np.ones(segment.wavelength.size)
+            if segment.continuum:
+                continuum = self._basis(segment) @ theta[list(segment.continuum)]
+            flux = continuum * (operator[0] @ transmission[k, :size])
             if segment.zero_level is not None:
                 flux = flux + theta[segment.zero_level]
             residual = np.full(flux.size, np.nan)
             good = segment.good
             residual[good] = (segment.data[good] - flux[good]) / segment.error[good]
-            predictions.append(SegmentPrediction(flux, continuum, residual, np.array(alone)))
+            absorbed: Array = operator[0] @ single.T
+            predictions.append(
+                SegmentPrediction(flux, continuum, residual, np.ascontiguousarray(absorbed.T))
+            )
         return predictions

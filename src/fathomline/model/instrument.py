@@ -21,6 +21,7 @@ is 0.001 ppm for an Fe II line against a Mg II line. A test repeats the scan.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -88,39 +89,58 @@ class InstrumentOperator:
         self._low, self._high, self._grid = edges_low, edges_high, grid
         self._spacing = float(grid[1] - grid[0])
 
-    def _band(self, sigma: float) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
-        reach = _REACH * sigma
-        first = np.searchsorted(self._grid, self._low - reach)
-        last = np.searchsorted(self._grid, self._high + reach)
+    def _band(
+        self, below: float, above: float
+    ) -> tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.intp]]:
+        """Row pointers, column indices and rows of the entries within reach of each pixel."""
+        first = np.searchsorted(self._grid, self._low - below)
+        last = np.searchsorted(self._grid, self._high + above)
         counts = last - first
-        indptr = np.concatenate([[0], np.cumsum(counts)])
-        indices = np.arange(indptr[-1]) - np.repeat(indptr[:-1] - first, counts)
-        return indptr, indices
+        pointers = np.concatenate([[0], np.cumsum(counts)])
+        indices = np.arange(pointers[-1]) - np.repeat(pointers[:-1] - first, counts)
+        return pointers, indices, np.repeat(np.arange(self._low.size), counts)
 
-    def matrix(self, sigma: float) -> csr_array:
-        """Operator (n_pixels, n_fine) for a Gaussian line-spread function of width `sigma`."""
-        return self._build(sigma, derivative=False)[0]
+    def matrix(self, sigma: float | Array) -> csr_array:
+        """Operator (n_pixels, n_fine) for a Gaussian line-spread function.
 
-    def matrix_with_derivative(self, sigma: float) -> tuple[csr_array, csr_array]:
+        `sigma` is its standard deviation, km/s: one for all pixels or one for each.
+        """
+        return self.matrix_with_derivative(sigma)[0]
+
+    def matrix_with_derivative(self, sigma: float | Array) -> tuple[csr_array, csr_array]:
         """Operator and its derivative to `sigma`, per km/s."""
-        operator, derivative = self._build(sigma, derivative=True)
-        assert derivative is not None
-        return operator, derivative
-
-    def _build(self, sigma: float, *, derivative: bool) -> tuple[csr_array, csr_array | None]:
-        indptr, indices = self._band(sigma)
-        row = np.repeat(np.arange(self._low.size), np.diff(indptr))
+        reach = _REACH * float(np.max(sigma))
+        pointers, indices, row = self._band(reach, reach)
+        width = np.broadcast_to(sigma, self._low.shape)[row]
         v = self._grid[indices]
-        high = (self._high[row] - v) / sigma
-        low = (self._low[row] - v) / sigma
+        high = (self._high[row] - v) / width
+        low = (self._low[row] - v) / width
         weight = self._spacing / (self._high - self._low)[row]
         shape = (self._low.size, self._grid.size)
-        operator = csr_array((weight * (ndtr(high) - ndtr(low)), indices, indptr), shape=shape)
-        if not derivative:
-            return operator, None
+        operator = csr_array((weight * (ndtr(high) - ndtr(low)), indices, pointers), shape=shape)
         slope = low * np.exp(-0.5 * low**2) - high * np.exp(-0.5 * high**2)
-        data = weight * slope * (_INV_SQRT_2PI / sigma)
-        return operator, csr_array((data, indices, indptr), shape=shape)
+        data = weight * slope * (_INV_SQRT_2PI / width)
+        return operator, csr_array((data, indices, pointers), shape=shape)
+
+    def tabulated(
+        self, cumulative: Callable[[Array, NDArray[np.intp]], Array], below: float, above: float
+    ) -> csr_array:
+        """Operator for any line-spread function, from its integral.
+
+        Parameters
+        ----------
+        cumulative : callable
+            (v, pixel) → ∫ of the line-spread function of that pixel up to v, km/s, where v is the
+            recorded minus the true velocity; 0 below, 1 above.
+        below, above : float
+            How far light is spread to larger and to smaller recorded velocities, km/s.
+
+        """
+        pointers, indices, row = self._band(below, above)
+        v = self._grid[indices]
+        weight = self._spacing / (self._high - self._low)[row]
+        data = weight * (cumulative(self._high[row] - v, row) - cumulative(self._low[row] - v, row))
+        return csr_array((data, indices, pointers), shape=(self._low.size, self._grid.size))
 
 
 def log_velocity(wavelength: Array, reference: float) -> Array:

@@ -1,7 +1,7 @@
-"""Optical depth of one velocity component in one transition, with its derivatives.
+"""Optical depth of many velocity components in many transitions, with its derivatives.
 
 For a component of Doppler parameter b and column density N, summed over the isotopic and
-hyperfine lines j of the transition (wavelength λ_j, fraction φ_j of the oscillator strength f),
+hyperfine lines j of a transition (wavelength λ_j, fraction φ_j of the oscillator strength f),
 
     τ(λ) = Σ_j A_j H(a_j, u_j),    A_j = K N f φ_j λ_j/b_j,    K = π e² / (m_e c √π),
     u_j = (c/b_j) (λ_j s/λ − 1),    a_j = Γ λ_j / (4π b_j),    s = 1 + z of the component,
@@ -16,18 +16,20 @@ k_j = c/b_j the derivatives are sums over four functions of each line,
     ∂τ/∂x          A d           A d k      A d           A d a
     ∂τ/∂p          −A b'/b                  −A b'/b       −A a b'/b
 
-for a parameter p of the width with b' = ∂b_j/∂p, so that one small matrix product forms them all.
+for a parameter p of the width with b' = ∂b_j/∂p. The fractions may depend linearly on one
+abundance h, φ_j = φ_j(1) + (h − 1) φ'_j, which adds a row ∂τ/∂h = Σ_j A_j φ'_j/φ_j H_j.
 
-Work is done where a line absorbs. Within 8 Doppler widths of the lines the four functions are
-evaluated in full; in the wings by the asymptotic series. There one composite line stands for all
-when their spread (variance σ² in Doppler widths) changes the wing by less than 1e-8 in τ: the
-wing a τ0/(√π u²) of a spread line is larger by the factor 1 + 3σ²/u².
+Work is done where a line absorbs, and for all lines at once: `LineTable` lays the points of every
+line in every grid end to end in one flat array. Within 8 Doppler widths of a line the functions
+are evaluated in full; in the wings by the asymptotic series. There one composite line stands for
+all lines of a transition when their spread (variance σ² in Doppler widths) changes the wing by
+less than 1e-8 in τ: the wing a τ0/(√π u²) of a spread line is larger by the factor 1 + 3σ²/u².
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -37,9 +39,10 @@ from fathomline.atomic import Transition
 from fathomline.constants import C_KMS, DEPTH_CONSTANT
 from fathomline.profile.voigt import CORE, SERIES_A, voigt_core, voigt_wing
 
-__all__ = ["FineGrid", "TransitionLines", "WidthSlopes"]
+__all__ = ["FineGrid", "LineItem", "LineTable", "TransitionLines"]
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.intp]
 
 # Γ [1/s] λ [Å] / (4π b [km/s]) without unit: 1e-10 m per Å, 1e3 m/s per km/s
 _DAMPING = 1e-13 / (4.0 * math.pi)
@@ -54,53 +57,72 @@ class FineGrid:
     Attributes
     ----------
     start, step : float
-        First ln λ and spacing.
-    inverse : array (n,)
-        1/λ, Å⁻¹.
+        First ln λ (λ in Å) and spacing.
+    size : int
 
     """
 
     start: float
     step: float
-    inverse: Array
+    size: int
 
-    def span(self, low: float, high: float) -> tuple[int, int]:
-        """Range of indices whose wavelengths lie in [low, high] Å, clipped to the grid."""
-        first = math.ceil((math.log(low) - self.start) / self.step)
-        last = math.floor((math.log(high) - self.start) / self.step) + 1
-        size = self.inverse.size
-        return min(max(first, 0), size), min(max(last, 0), size)
-
-
-WidthSlopes = Array
-"""∂b_j/∂p: array (n_width_parameters, n_lines)."""
+    @property
+    def inverse(self) -> Array:
+        """1/λ (size,), Å⁻¹."""
+        values: Array = np.exp(-(self.start + self.step * np.arange(self.size, dtype=np.float64)))
+        return values
 
 
 class TransitionLines:
-    """The lines of one transition, ready to be evaluated many times.
+    """The isotopic and hyperfine lines of one transition as arrays.
 
     Parameters
     ----------
     transition : Transition
-        With its isotopic and hyperfine components, or as a composite.
+        With its structure, or as a composite.
+    heavy_element : str, optional
+        Element whose heavier isotopes follow an abundance h relative to the tables, at the cost
+        of the lightest one.
+
+    Attributes
+    ----------
+    name : str
+    omega, strength, masses : array (n_lines,)
+        Wavenumber (cm⁻¹), f φ, and mass (u) of each line.
+    by_heavy : array (n_lines,)
+        Derivative of the strength to h; zero for other elements.
+    gamma, q : float
+        Γ (s⁻¹) and q (cm⁻¹); 0 where they are not known.
 
     """
 
-    __slots__ = ("_gamma", "_omega", "_q", "_share", "_strength", "masses", "name")
+    __slots__ = ("by_heavy", "gamma", "masses", "name", "omega", "q", "strength")
 
-    def __init__(self, transition: Transition) -> None:
+    def __init__(self, transition: Transition, heavy_element: str | None = None) -> None:
         components = transition.components
         self.name = transition.name
         self.masses: Array = np.array([c.mass for c in components])
-        self._omega: Array = np.array([c.wavenumber for c in components])
-        self._strength: Array = np.array([transition.f * c.fraction for c in components])
-        self._share: Array = self._strength / self._strength.sum()
-        self._gamma = transition.gamma or 0.0
-        self._q = transition.q or 0.0
+        self.omega: Array = np.array([c.wavenumber for c in components])
+        self.strength: Array = np.array([transition.f * c.fraction for c in components])
+        self.by_heavy: Array = np.zeros(len(components))
+        if transition.element == heavy_element and transition.structure:
+            isotope = np.array([c.mass_number for c in components])
+            light = isotope == isotope.min()
+            share = self.strength[light] / self.strength[light].sum()
+            self.by_heavy[~light] = self.strength[~light]
+            self.by_heavy[light] = -self.strength[~light].sum() * share
+        self.gamma = transition.gamma or 0.0
+        self.q = transition.q or 0.0
+
+    @property
+    def rest(self) -> Array:
+        """Rest wavelengths (n_lines,) at α0, Å."""
+        rest: Array = 1e8 / self.omega
+        return rest
 
     def peak_depth(self, b: Array, column: float) -> float:
         """Central optical depth if all lines of the transition coincided (an upper bound)."""
-        return float(DEPTH_CONSTANT * column * np.sum(self._strength * 1e8 / self._omega / b))
+        return float(DEPTH_CONSTANT * column * np.sum(self.strength * self.rest / b))
 
     def reach(self, b: float, column: float, depth: float) -> float:
         """Distance from the line centre, km/s, beyond which τ stays below `depth`.
@@ -109,113 +131,211 @@ class TransitionLines:
         """
         centre = self.peak_depth(np.full(self.masses.size, b), column)
         core = b * math.sqrt(max(math.log(max(centre / depth, 1.0)), 0.0))
-        rest = 1e8 / float(self._omega.min())
-        wing = math.sqrt(centre * self._gamma * _DAMPING * rest * b / (depth * math.sqrt(math.pi)))
+        rest = float(self.rest.max())
+        wing = math.sqrt(centre * self.gamma * _DAMPING * rest * b / (depth * math.sqrt(math.pi)))
         return max(core, wing)
 
-    def depth(self, grid: FineGrid, s: float, b: Array, column: float, x: float) -> Array:
-        """Optical depth τ (n,) on the whole grid.
+    def wings_may_merge(self, b: Array, column: float) -> bool:
+        """Whether one composite line may stand for all in the wings (see the module)."""
+        if self.by_heavy.any():
+            return False
+        share = self.strength / self.strength.sum()
+        mean = float(share @ self.rest)
+        spread = C_KMS / float(b.min()) * (self.rest / mean - 1.0)
+        factor = 3.0 * float(share @ spread**2) / CORE**4 / math.sqrt(math.pi)
+        a = self.gamma * _DAMPING * mean / float(b.min())
+        return factor * a * self.peak_depth(b, column) < _WING_TOLERANCE
+
+    def composite(self) -> tuple[float, float, float]:
+        """Wavenumber, strength and mass of one line that stands for all."""
+        total = float(self.strength.sum())
+        share = self.strength / total
+        return 1e8 / float(share @ self.rest), total, float(share @ self.masses)
+
+
+@dataclass(frozen=True, slots=True)
+class LineItem:
+    """One component in one transition on one grid.
+
+    Attributes
+    ----------
+    grid : int
+        Number of the grid.
+    lines : TransitionLines
+    merge_wings : bool
+        Whether a composite line stands for all lines in the wings.
+
+    """
+
+    grid: int
+    lines: TransitionLines
+    merge_wings: bool = True
+
+
+def _rows(i: int, lines: TransitionLines, *, merged: bool) -> list[tuple[float, ...]]:
+    """Item, ω, f φ, Γ, q, mass and ∂(f φ)/∂h of each line of an item, or of its composite."""
+    if merged:
+        omega, strength, mass = lines.composite()
+        return [(i, omega, strength, lines.gamma, lines.q, mass, 0.0)]
+    columns = (lines.omega, lines.strength, lines.masses, lines.by_heavy)
+    return [
+        (i, omega, strength, lines.gamma, lines.q, mass, by_heavy)
+        for omega, strength, mass, by_heavy in zip(*columns, strict=True)
+    ]
+
+
+class LineTable:
+    """All lines of a model, ready to be evaluated many times.
+
+    Lines are numbered through: first those evaluated near their centres, item by item, then those
+    evaluated in the wings.
+
+    Parameters
+    ----------
+    items : sequence of LineItem
+    grids : sequence of FineGrid
+
+    Attributes
+    ----------
+    item : int array (n_lines,)
+        The item of each line.
+    masses : array (n_lines,)
+        Mass of the absorbing atom, u.
+    n_items, n_grids, width : int
+        Items, grids, and the size of the longest grid.
+
+    """
+
+    def __init__(self, items: Sequence[LineItem], grids: Sequence[FineGrid]) -> None:
+        self.n_items, self.n_grids = len(items), len(grids)
+        self.width = max((grid.size for grid in grids), default=0)
+        near = [_rows(i, item.lines, merged=False) for i, item in enumerate(items)]
+        wings = [_rows(i, item.lines, merged=item.merge_wings) for i, item in enumerate(items)]
+        self._n_core = sum(len(block) for block in near)
+        rows = [row for block in (*near, *wings) for row in block]
+        table = np.array([row[1:] for row in rows], dtype=np.float64).reshape(-1, 6).T
+        self._omega, self._strength, gamma, self._q, self.masses, self._by_heavy = table
+        self.has_heavy = bool(self._by_heavy.any())
+        self._damping = gamma * _DAMPING
+        self.item: Indices = np.array([row[0] for row in rows], dtype=np.intp)
+        self._first_line = np.searchsorted(self.item[: self._n_core], np.arange(self.n_items))
+        grid_of_item = np.array([item.grid for item in items], dtype=np.intp)
+        self.grid_of_item: Indices = grid_of_item
+        self._start = np.array([grids[g].start for g in grid_of_item])
+        self._step = np.array([grids[g].step for g in grid_of_item])
+        self._size = np.array([grids[g].size for g in grid_of_item], dtype=np.intp)
+
+    def _core_range(
+        self, centre: Array, half: Array, damped: NDArray[np.bool_]
+    ) -> tuple[Indices, Indices]:
+        """First and last (exclusive) grid index of the core of each item."""
+        if self.n_items == 0:
+            return np.zeros(0, np.intp), np.zeros(0, np.intp)
+        low = np.minimum.reduceat(centre - half, self._first_line)
+        high = np.maximum.reduceat(centre + half, self._first_line)
+        first = np.ceil((low - self._start) / self._step)
+        last = np.floor((high - self._start) / self._step) + 1.0
+        whole = np.logical_or.reduceat(damped, self._first_line)
+        first = np.where(whole, 0.0, np.clip(first, 0, self._size))
+        last = np.where(whole, self._size, np.clip(last, first, self._size))
+        return first.astype(np.intp), last.astype(np.intp)
+
+    def evaluate(
+        self,
+        inverse: Array,
+        s: Array,
+        column: Array,
+        b: Array,
+        x: float,
+        slopes: Array | None = None,
+        *,
+        margin: float = 0.0,
+        heavy: float = 1.0,
+    ) -> Array:
+        """Optical depth, and with `slopes` its derivatives, of every item on its grid.
 
         Parameters
         ----------
-        grid : FineGrid
-        s : float
-            1 + z of the component.
+        inverse : array (n_grids, width)
+            1/λ of the true wavelengths, Å⁻¹; what lies beyond the size of a grid is ignored.
+        s, column : array (n_items,)
+            1 + z and column density (cm⁻²).
         b : array (n_lines,)
-            Doppler parameter of each line, km/s.
-        column : float
-            Column density N, cm⁻².
+            Doppler parameters, km/s.
         x : float
             (α/α0)² − 1.
+        slopes : array (n_width_parameters, n_lines), optional
+            ∂b/∂p.
+        margin : float
+            Largest relative distance of `inverse` from the uniform grids.
+        heavy : float
+            Abundance h of heavier isotopes relative to the tables.
+
+        Returns
+        -------
+        array (1, n_items, width), or (3 + n_width_parameters, n_items, width) with `slopes`
+            τ; ∂τ/∂ln s (also the derivative to a shift of the wavelength scale); ∂τ/∂x; ∂τ/∂p for
+            each parameter p of the width; and, when some line depends on h, ∂τ/∂h. Zero beyond the
+            size of a grid.
 
         """
-        tau = np.zeros(grid.inverse.size)
-        for part, values in self.parts(grid, s, b, column, x):
-            tau[part] = values[0]
-        return tau
-
-    def parts(
-        self,
-        grid: FineGrid,
-        s: float,
-        b: Array,
-        column: float,
-        x: float,
-        slopes: WidthSlopes | None = None,
-    ) -> Iterator[tuple[slice, Array]]:
-        """Optical depth, and with `slopes` its derivatives, on the parts of the grid.
-
-        Yields
-        ------
-        slice
-            Of the grid.
-        array (1, n), or (3 + n_width_parameters, n) with `slopes`
-            τ; s ∂τ/∂s (also the derivative to a shift of the wavelength scale); ∂τ/∂x; and ∂τ/∂p
-            for each parameter p of the width.
-
-        """
+        n_core, item = self._n_core, self.item
         rest = 1e8 / (self._omega + self._q * x)
-        strength = DEPTH_CONSTANT * column * self._strength
-        first, last = 0, grid.inverse.size
-        if self._gamma * _DAMPING * rest.max() / b.min() <= SERIES_A:
-            half = CORE * b.max() / C_KMS
-            first, last = grid.span(rest.min() * s / (1.0 + half), rest.max() * s / (1.0 - half))
-        if first < last:
-            values = self._values(
-                grid.inverse[first:last], s, b, x, rest, strength, slopes, core=True
-            )
-            yield slice(first, last), values
-        wings = [w for w in (slice(0, first), slice(last, grid.inverse.size)) if w.stop > w.start]
-        if wings and self._merges_in_wings(rest, b, strength):
-            share = self._share
-            rest, strength = np.array([share @ rest]), np.array([strength.sum()])
-            b = np.array([share @ b])
-            slopes = None if slopes is None else (slopes @ share)[:, None]
-        for wing in wings:
-            yield (
-                wing,
-                self._values(grid.inverse[wing], s, b, x, rest, strength, slopes, core=False),
-            )
-
-    def _merges_in_wings(self, rest: Array, b: Array, strength: Array) -> bool:
-        mean = self._share @ rest
-        spread = C_KMS / b.min() * (rest / mean - 1.0)
-        factor = 3.0 * float(self._share @ spread**2) / CORE**4 / math.sqrt(math.pi)
-        damped = strength.sum() * (mean / b.min()) ** 2 * self._gamma * _DAMPING
-        return bool(factor * damped < _WING_TOLERANCE)
-
-    def _values(
-        self,
-        inverse: Array,
-        s: float,
-        b: Array,
-        x: float,
-        rest: Array,
-        strength: Array,
-        slopes: WidthSlopes | None,
-        *,
-        core: bool,
-    ) -> Array:
         k = C_KMS / b
-        u = (k * rest * s)[:, None] * inverse
-        u -= k[:, None]
-        a = self._gamma * _DAMPING * rest / b
-        amplitude = strength * rest / b
-        functions = (voigt_core if core else voigt_wing)(a, u, derivatives=slopes is not None)
-        if slopes is None:
-            tau: Array = amplitude[None, :] @ functions[0]
-            return tau
-        coefficients = np.zeros((3 + slopes.shape[0], 4, b.size))
-        coefficients[0, 0] = amplitude
-        coefficients[1, 1] = amplitude * k
-        coefficients[1, 2] = amplitude
-        d = amplitude * (-self._q / 1e8) * rest
-        coefficients[2] = d, d * k, d, d * a
-        relative = -amplitude * slopes / b
-        coefficients[3:, 0] = relative
-        coefficients[3:, 2] = relative
-        coefficients[3:, 3] = relative * a
-        values: Array = coefficients.reshape(3 + slopes.shape[0], -1) @ functions.reshape(
-            -1, u.shape[1]
+        a = self._damping * rest / b
+        unit = DEPTH_CONSTANT * column[item] * rest / b
+        amplitude = unit * (self._strength + (heavy - 1.0) * self._by_heavy)
+        observed = rest * s[item]
+        first, last = self._core_range(
+            np.log(observed[:n_core]), CORE / k[:n_core] * 1.01 + margin, a[:n_core] > SERIES_A
         )
-        return values
+        # the ranges of all lines: cores, then left wings, then right wings
+        wing = item[n_core:]
+        begin = np.concatenate([first[item[:n_core]], np.zeros(wing.size, np.intp), last[wing]])
+        count = np.concatenate(
+            [(last - first)[item[:n_core]], first[wing], (self._size - last)[wing]]
+        )
+        which = np.concatenate([np.arange(item.size), np.arange(n_core, item.size)])
+        ends = np.cumsum(count)
+        total = int(ends[-1]) if ends.size else 0
+        n_near = int(ends[n_core - 1]) if n_core else 0
+        offset = begin - (ends - count) + item[which] * self.width
+        target = np.arange(total) + np.repeat(offset, count)
+        source = target + np.repeat(
+            (self.grid_of_item[item[which]] - item[which]) * self.width, count
+        )
+        columns = [k * observed, k, amplitude, a]
+        if slopes is not None:
+            columns += [amplitude * k, amplitude * a, -rest * self._q / 1e8, *(-slopes / b)]
+            if self.has_heavy:
+                columns.append(unit * self._by_heavy)
+        spread = np.repeat(np.array(columns)[:, which], count, axis=1)
+        u = spread[0] * inverse.ravel()[source] - spread[1]
+        functions = np.empty((1 if slopes is None else 4, total))
+        derivatives = slopes is not None
+        functions[:, :n_near] = voigt_core(spread[3, :n_near], u[:n_near], derivatives=derivatives)
+        functions[:, n_near:] = voigt_wing(spread[3, n_near:], u[n_near:], derivatives=derivatives)
+        return self._collect(functions, spread, target)
+
+    def _collect(self, functions: Array, spread: Array, target: Indices) -> Array:
+        """Sum the lines of each item on its grid."""
+        size = self.n_items * self.width
+
+        def summed(values: Array) -> Array:
+            sums: Array = np.bincount(target, values, minlength=size).astype(np.float64, copy=False)
+            return sums.reshape(self.n_items, self.width)
+
+        tau = spread[2] * functions[0]
+        if len(functions) == 1:
+            return summed(tau)[None]
+        _, _, amplitude, _, steep, damped, by_x, *by_width = spread
+        by_heavy = by_width.pop() if self.has_heavy else None
+        shifted = amplitude * functions[2]
+        spread_out = tau + shifted
+        spread_out += damped * functions[3]
+        moved = steep * functions[1]
+        rows = [summed(tau), summed(shifted + moved), summed((spread_out + moved) * by_x)]
+        rows += [summed(spread_out * factor) for factor in by_width]
+        if by_heavy is not None:
+            rows.append(summed(by_heavy * functions[0]))
+        return np.array(rows)

@@ -61,10 +61,8 @@ def faddeeva(a: Array, u: Array) -> ComplexArray:
 
     Parameters
     ----------
-    a : array, broadcastable to `u`
-        0 ≤ a ≤ `SERIES_A`.
-    u : array
-        From −12 to 12.
+    a, u : array, of one shape
+        0 ≤ a ≤ `SERIES_A`, −12 ≤ u ≤ 12.
 
     Returns
     -------
@@ -88,16 +86,12 @@ def faddeeva(a: Array, u: Array) -> ComplexArray:
 
 def _general(a: Array, u: Array) -> ComplexArray:
     """w(u + i a) anywhere in the half plane a ≥ 0."""
-    if np.max(a, initial=0.0) > SERIES_A:
-        anywhere: ComplexArray = wofz(u + 1j * a)
-        return anywhere
-    far = np.abs(u) > _LAST_NODE
+    far = (np.abs(u) > _LAST_NODE) | (a > SERIES_A)
     if not far.any():
         return faddeeva(a, u)
     value = np.empty(u.shape, dtype=np.complex128)
-    damping = np.broadcast_to(a, u.shape)
-    value[far] = wofz(u[far] + 1j * damping[far])
-    value[~far] = faddeeva(damping[~far], u[~far])
+    value[far] = wofz(u[far] + 1j * a[far])
+    value[~far] = faddeeva(a[~far], u[~far])
     return value
 
 
@@ -110,29 +104,26 @@ def voigt(a: ArrayLike, u: ArrayLike) -> Array:
 
 
 def voigt_core(a: Array, u: Array, *, derivatives: bool) -> Array:
-    """H and its derivatives for a few lines on a grid.
+    """H and its derivatives.
 
     Parameters
     ----------
-    a : array (n_lines,)
-        Damping parameters, ≥ 0.
-    u : array (n_lines, n)
-        Distances from the line centres in Doppler widths.
+    a, u : array (n,)
+        Damping parameters, ≥ 0, and distances from the line centres in Doppler widths.
     derivatives : bool
         Whether more than H is wanted.
 
     Returns
     -------
-    array (4, n_lines, n), or (1, n_lines, n) without derivatives
+    array (4, n), or (1, n) without derivatives
         H, ∂H/∂u, u ∂H/∂u and ∂H/∂a.
 
     """
-    damping = a[:, None]
-    w = _general(damping, u)
-    out = np.empty((4 if derivatives else 1, *u.shape))
+    w = _general(a, u)
+    out = np.empty((4 if derivatives else 1, u.size))
     out[0] = w.real
     if derivatives:
-        w *= u + 1j * damping
+        w *= u + 1j * a
         w *= -2.0
         out[1] = w.real
         np.multiply(out[1], u, out=out[2])
@@ -147,9 +138,9 @@ def voigt_wing(a: Array, u: Array, *, derivatives: bool) -> Array:
     out (exp(−64) = 2e-28); the terms dropped are below 4e-6 of H, that is 1e-9 of the
     value at the centre. Parameters and returns as for `voigt_core`.
     """
-    out = np.empty((4 if derivatives else 1, *u.shape))
+    out = np.empty((4 if derivatives else 1, u.size))
     t = 1.0 / (u * u)
-    amplitude = (a / _SQRT_PI)[:, None]
+    amplitude = a / _SQRT_PI
     np.multiply(t, 1.0 + t * (1.5 + t * (3.75 + t * 13.125)), out=out[0])
     if derivatives:
         out[3] = out[0] / _SQRT_PI

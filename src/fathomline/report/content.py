@@ -231,8 +231,7 @@ def restarts_table(m: Measurement) -> TableText | None:
             Cell(_tiny(r.shift_sigma)),
             Cell(_tiny(r.chi2_change)),
             Cell(str(r.n_evaluations)),
-            Cell("yes" if r.converged else "no"),
-            Cell("yes" if r.returned else "no"),
+            Cell(r.outcome),
         )
         for k, r in enumerate(m.fit.restarts, start=1)
     )
@@ -245,8 +244,7 @@ def restarts_table(m: Measurement) -> TableText | None:
             ("Shift of Δα/α", "σ"),
             ("Δχ²", ""),
             ("Evaluations", ""),
-            ("Converged", ""),
-            ("Returned", ""),
+            ("Outcome", ""),
         ),
         rows,
     )

@@ -73,6 +73,7 @@ def render_report(measurement: Measurement, *, command: str = "") -> str:
         components=content.components_text(measurement),
         restarts=content.restarts_table(measurement),
         all_returned=all(r.returned for r in measurement.fit.restarts),
+        proved=measurement.fit.converged,
         atomic=atomic,
         sources=sources,
         tables=provenance["atomic_data"]["tables"],

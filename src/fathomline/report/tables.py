@@ -84,7 +84,7 @@ def measurement_table(m: Measurement) -> Table:
             (
                 "converged",
                 None,
-                "minimum reached, and every restart returned to it",
+                "minimum reached, and every restart returned or ended in a worse one",
                 [fit.converged],
             ),
             ("blinded", None, "whether dalpha_ppm is hidden", [False]),

@@ -12,7 +12,12 @@ from fathomline.spectra.distortion import (
     table_basis,
 )
 from fathomline.spectra.frames import barycentric_velocity, to_barycentric
-from fathomline.spectra.line_spread import GaussianLineSpread, LineSpread
+from fathomline.spectra.line_spread import (
+    FWHM_PER_SIGMA,
+    GaussianLineSpread,
+    LineSpread,
+    TabulatedLineSpread,
+)
 from fathomline.spectra.media import AIR_FORMULAS, air_to_vacuum, vacuum_to_air
 from fathomline.spectra.read import FRAMES, MEDIA, read_spectrum
 from fathomline.spectra.reading import Reading
@@ -25,12 +30,14 @@ __all__ = [
     "AIR_FORMULAS",
     "ALLOWED_UNITS",
     "FRAMES",
+    "FWHM_PER_SIGMA",
     "MEDIA",
     "GaussianLineSpread",
     "LineSpread",
     "Reading",
     "Spectrum",
     "SpectrumSummary",
+    "TabulatedLineSpread",
     "air_to_vacuum",
     "barycentric_velocity",
     "local_level",

@@ -11,10 +11,13 @@ import math
 from dataclasses import dataclass
 from typing import Any, TypeAlias
 
+import numpy as np
+from numpy.typing import NDArray
+
 from fathomline.constants import C_KMS
 from fathomline.errors import SpectrumError
 
-__all__ = ["FWHM_PER_SIGMA", "GaussianLineSpread", "LineSpread"]
+__all__ = ["FWHM_PER_SIGMA", "GaussianLineSpread", "LineSpread", "TabulatedLineSpread"]
 
 FWHM_PER_SIGMA: float = 2.0 * math.sqrt(2.0 * math.log(2.0))
 """Full width at half maximum of a Gaussian of unit standard deviation."""
@@ -108,5 +111,115 @@ class GaussianLineSpread:
         return {"kind": "gaussian", "fwhm": self.fwhm, "error": self.error}
 
 
+@dataclass(frozen=True, eq=False)
+class TabulatedLineSpread:
+    """A measured line-spread function, asymmetric or not, that may change with wavelength.
+
+    Between the tabulated velocities the profile is a cubic spline, between the tabulated
+    wavelengths its integral is interpolated linearly (constant beyond them), and it is zero outside
+    the tabulated velocities. Profiles are normalised to unit area.
+
+    Parameters
+    ----------
+    velocity : array (n,)
+        Recorded minus true velocity, km/s, increasing.
+    profiles : array (m, n)
+        Profile at each of m wavelengths; not negative beyond noise.
+    wavelengths : array (m,)
+        Å, increasing.
+
+    Raises
+    ------
+    SpectrumError
+        If shapes differ, numbers are not finite, or a profile has no positive area.
+
+    """
+
+    velocity: NDArray[np.float64]
+    profiles: NDArray[np.float64]
+    wavelengths: NDArray[np.float64]
+
+    def __post_init__(self) -> None:
+        v = np.array(self.velocity, dtype=np.float64)
+        p = np.atleast_2d(np.array(self.profiles, dtype=np.float64))
+        w = np.atleast_1d(np.array(self.wavelengths, dtype=np.float64))
+        what = "line-spread function"
+        if v.ndim != 1 or v.size < 5 or p.shape != (w.size, v.size):
+            raise SpectrumError(
+                f"{what}: expected at least 5 velocities and a profile for each wavelength, found "
+                f"{v.size} velocities and profiles of shape {p.shape}"
+            )
+        if not (np.isfinite(v).all() and np.isfinite(p).all() and np.isfinite(w).all()):
+            raise SpectrumError(f"{what}: every number of the table must be finite")
+        if np.any(np.diff(v) <= 0.0) or np.any(np.diff(w) <= 0.0):
+            raise SpectrumError(f"{what}: velocities and wavelengths must increase strictly")
+        from scipy.interpolate import CubicSpline
+
+        primitive = CubicSpline(v, p, axis=1).antiderivative()
+        area = primitive(v[-1]) - primitive(v[0])
+        if np.any(area <= 0.0):
+            raise SpectrumError(f"{what}: a profile has no positive area")
+        for name, value in (("velocity", v), ("profiles", p / area[:, None]), ("wavelengths", w)):
+            value.flags.writeable = False
+            object.__setattr__(self, name, value)
+        object.__setattr__(self, "_primitive", primitive)
+        object.__setattr__(self, "_area", area)
+
+    def cumulative(
+        self, velocity: NDArray[np.float64], wavelength: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Integral of the profile up to `velocity` (n,), km/s, at `wavelength` (n,), Å."""
+        low, high = self.velocity[0], self.velocity[-1]
+        primitive: Any = self._primitive  # type: ignore[attr-defined]
+        area: NDArray[np.float64] = self._area  # type: ignore[attr-defined]
+        values = (primitive(np.clip(velocity, low, high)) - primitive(low)[:, None]) / area[:, None]
+        if self.wavelengths.size == 1:
+            only: NDArray[np.float64] = values[0]
+            return only
+        place = np.interp(wavelength, self.wavelengths, np.arange(self.wavelengths.size))
+        below = np.minimum(place.astype(np.intp), self.wavelengths.size - 2)
+        part = place - below
+        pixel = np.arange(velocity.size)
+        mixed: NDArray[np.float64] = (1.0 - part) * values[below, pixel] + part * values[
+            below + 1, pixel
+        ]
+        return mixed
+
+    @property
+    def reach(self) -> float:
+        """Largest tabulated distance, km/s."""
+        return float(max(abs(self.velocity[0]), abs(self.velocity[-1])))
+
+    @property
+    def fwhm(self) -> float:
+        """Full width at half maximum of the narrowest profile, km/s."""
+        widths = []
+        for profile in self.profiles:
+            above = np.flatnonzero(profile >= 0.5 * profile.max())
+            first, last = above[0], above[-1]
+            half = 0.5 * profile.max()
+            left, right = self.velocity[first], self.velocity[last]
+            if first > 0:
+                left = np.interp(
+                    half, profile[first - 1 : first + 1], self.velocity[first - 1 : first + 1]
+                )
+            if last < profile.size - 1:
+                right = np.interp(-half, -profile[last : last + 2], self.velocity[last : last + 2])
+            widths.append(float(right - left))
+        return min(widths)
+
+    @property
+    def finest(self) -> float:
+        """Scale that a numerical integral must resolve, km/s: half of that of the FWHM.
+
+        An asymmetric profile has sharper flanks than the Gaussian of its FWHM.
+        """
+        return 0.5 * self.fwhm / FWHM_PER_SIGMA
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return a description that `json` can write."""
+        return {"kind": "table", "fwhm": self.fwhm, "wavelengths": self.wavelengths.tolist()}
+
+
 # every line-spread function that a spectrum may carry
-LineSpread: TypeAlias = GaussianLineSpread
+LineSpread: TypeAlias = GaussianLineSpread | TabulatedLineSpread
