@@ -11,6 +11,7 @@ from astropy.table import Table
 
 from calibration_support import PIVOT, log_edges, noisy, recorded
 from fathomline.cli.main import _run
+from fathomline.job.instrument_tables import Distortion
 from fathomline.report.calibration import CALIBRATION_FILES
 from fathomline.spectra import read_distortion_table, write_spectrum
 
@@ -131,19 +132,27 @@ def test_figure_is_the_same_on_every_run(shifts, tmp_path, capsys):
     assert (tmp_path / "a" / "calibration.pdf").read_bytes().startswith(b"%PDF")
 
 
-def test_odd_names_make_valid_toml(shifts, tmp_path, capsys):
+def test_blocks_fit_into_a_job(shifts, tmp_path, capsys):
     odd = 'a "b"\\ $x_1 é\n[x]'
     out = tmp_path / "cal"
-    assert _run(["calibrate", str(shifts), "--spectrum", odd, "-o", str(out)]) == 0
+    more = ["--terms", "shift,slope,sawtooth", "--order-spacing", "70", "--shared", odd]
+    assert _run(["calibrate", str(shifts), "--spectrum", "red", *more, "-o", str(out)]) == 0
     capsys.readouterr()
     blocks = tomllib.loads((out / "distortion.toml").read_text(encoding="utf-8"))["distortion"]
-    assert blocks[0]["spectrum"] == odd
+    assert [block["shared"] for block in blocks] == [
+        f"{odd}-{kind}" for kind in ("shift", "slope", "sawtooth")
+    ]
+    for block in blocks:
+        found = Distortion.model_validate(block | {"shared": "tag"})
+        assert found.spectra == ("red",)
+        assert found.value == block["value"]
 
 
 @pytest.mark.parametrize(
     ("arguments", "message"),
     [
         (["{shifts}"], "--spectrum ID is needed"),
+        (["{shifts}", "--spectrum", "a b"], "the job's id of the spectrum"),
         (["{shifts}", "--spectrum", "r", "--chunk", "60"], "need two spectra"),
         (["{shifts}", "--spectrum", "r", "--terms", "curve"], "unknown term 'curve'"),
         (["{shifts}", "--spectrum", "r", "--terms", ","], "at least one term"),

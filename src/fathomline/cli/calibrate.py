@@ -131,6 +131,8 @@ def calibrate(
         write_calibration,
     )
 
+    name = spectrum if spectrum is not None else first.name.split(".")[0]
+    _check_identifier(name)
     if output is not None:
         check_calibration_target(output)
     fit_options = {
@@ -140,7 +142,7 @@ def calibrate(
         "robust": robust,
     }
     if second is None:
-        result = _from_table(first, spectrum or "", shared, fit_options)
+        result = _from_table(first, name, shared, fit_options)
     else:
         compare_options = {
             "chunk": chunk,
@@ -148,15 +150,22 @@ def calibrate(
             "correlation": correlation,
             "exclude_telluric": not telluric,
         }
-        result = _from_spectra(
-            first, second, spectrum, shared, ranges, compare_options, fit_options
-        )
+        result = _from_spectra(first, second, name, shared, ranges, compare_options, fit_options)
     files = [] if output is None else write_calibration(result, output)
     if as_json:
         print(json.dumps(summary_dict(result, files), ensure_ascii=False))
     else:
         _print(result, files)
     return 0
+
+
+def _check_identifier(name: str) -> None:
+    from fathomline.job.fields import IDENTIFIER
+
+    if not IDENTIFIER.fullmatch(name):
+        raise click.UsageError(
+            f"--spectrum {name!r}: give the job's id of the spectrum, of letters, digits and _ . -"
+        )
 
 
 def _from_table(
@@ -188,7 +197,7 @@ def _from_table(
 def _from_spectra(
     first: Path,
     second: Path,
-    spectrum: str | None,
+    spectrum: str,
     shared: str | None,
     ranges: tuple[tuple[float, float], ...],
     compare_options: dict[str, Any],
@@ -214,7 +223,7 @@ def _from_spectra(
     error = np.array([s.error for s in shifts])
     fit = fit_distortion(wavelength, velocity, error, **fit_options)
     return Calibration(
-        spectrum or one.name,
+        spectrum,
         second.name,
         (first.name, second.name),
         wavelength,

@@ -41,7 +41,7 @@ from fathomline.spectra.distortion import (
     slope_basis,
 )
 
-__all__ = ["TERMS", "DistortionFit", "DistortionTerm", "fit_distortion"]
+__all__ = ["TERMS", "DistortionFit", "FittedTerm", "fit_distortion"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -56,7 +56,7 @@ _MAD = 1.4826
 
 
 @dataclass(frozen=True, slots=True)
-class DistortionTerm:
+class FittedTerm:
     """One fitted coefficient.
 
     Attributes
@@ -108,7 +108,7 @@ class DistortionFit:
 
     """
 
-    terms: tuple[DistortionTerm, ...]
+    terms: tuple[FittedTerm, ...]
     covariance: FloatArray
     chi2_nu: float | None
     ndof: int
@@ -211,7 +211,7 @@ def fit_distortion(
     errors = np.sqrt(np.diag(covariance))
     return DistortionFit(
         terms=tuple(
-            DistortionTerm(
+            FittedTerm(
                 kind, float(v), float(e), math.hypot(float(e), best if kind == "shift" else 0.0)
             )
             for kind, v, e in zip(kinds, theta, errors, strict=True)
