@@ -168,7 +168,9 @@ def test_inspect_says_what_was_read(demo, capsys):
     assert "2.000 km/s" in out
 
 
-@pytest.mark.parametrize("command", ["demo", "lines", "inspect", "simulate", "measure"])
+@pytest.mark.parametrize(
+    "command", ["demo", "lines", "inspect", "simulate", "calibrate", "measure"]
+)
 def test_every_command_has_help_with_an_example(command, capsys):
     assert _run([command, "--help"]) == 0
     assert "Example" in capsys.readouterr().out

@@ -18,7 +18,7 @@ from fathomline.errors import FathomlineError, JobError
 
 __all__ = ["main"]
 
-_COMMANDS = ("demo", "lines", "inspect", "simulate", "measure")
+_COMMANDS = ("demo", "lines", "inspect", "simulate", "calibrate", "measure")
 
 
 class _LateGroup(click.Group):
