@@ -7,7 +7,7 @@ from functools import cache
 from pathlib import Path
 
 from fathomline.job import parse_job, read_job
-from fathomline.job.building import load_atoms
+from fathomline.job.inputs import load_atoms
 from fathomline.job.measurement import Measurement, measure
 from fathomline.job.simulation import Noise, simulate, synthetic_grid
 from fathomline.spectra import write_spectrum
