@@ -179,7 +179,7 @@ class AbsorberModel:
 
     def _prepare_grids(self, theta: Array) -> None:
         """Fine grids, padded to one width, and the instrument operator of each segment."""
-        self._grids: list[FineGrid] = []
+        self.grids: list[FineGrid] = []
         self._velocities: list[Array] = []
         self._operators: list[InstrumentOperator] = []
         for segment, spacing in zip(self.segments, self.spacings, strict=True):
@@ -191,20 +191,20 @@ class AbsorberModel:
                 sigma *= _WIDEST
             grid = fine_velocity_grid(float(low.min()), float(high.max()), sigma, spacing)
             self._velocities.append(grid)
-            self._grids.append(
+            self.grids.append(
                 FineGrid(math.log(reference) + float(grid[0]) / C_KMS, spacing / C_KMS, grid.size)
             )
             good = segment.good
             self._operators.append(InstrumentOperator(low[good], high[good], grid))
-        width = max(grid.size for grid in self._grids)
+        width = max(grid.size for grid in self.grids)
         self._inverse = np.array(
-            [np.pad(grid.inverse, (0, width - grid.size), mode="edge") for grid in self._grids]
+            [np.pad(grid.inverse, (0, width - grid.size), mode="edge") for grid in self.grids]
         )
         self._fwhm: tuple[float, ...] = ()
         self._matrix: Any = None
         self._bases = [
             [(k, t, np.pad(b, (0, width - b.size))) for t, b in self._terms(segment, grid)]
-            for k, (segment, grid) in enumerate(zip(self.segments, self._grids, strict=True))
+            for k, (segment, grid) in enumerate(zip(self.segments, self.grids, strict=True))
         ]
 
     @staticmethod
@@ -227,7 +227,7 @@ class AbsorberModel:
                 )
                 for item in items
             ],
-            self._grids,
+            self.grids,
         )
         self._velocity = np.array([components[i.component].velocity for i in items], dtype=np.intp)
         self._column = np.array([i.column for i in items], dtype=np.intp)
@@ -348,7 +348,7 @@ class AbsorberModel:
         """Residuals (n_data + n_priors,): (data − model)/error, then the priors."""
         theta = self.parameters.expand(free)
         self.n_evaluations += 1
-        rows, _ = self._line_rows(theta, derivatives=False)
+        rows, _ = self.line_rows(theta, derivatives=False)
         transmission = self._transmission(rows[0], theta)
         smooth = self._instrument(theta) @ transmission.ravel()
         return self._residuals(theta, self._polynomial(theta) * smooth)
@@ -441,7 +441,7 @@ class AbsorberModel:
         pointers = np.concatenate([[0], np.cumsum(counts)])
         return csr_array((data, indices, pointers), shape=(self.n_data, len(blocks) * width))
 
-    def _line_rows(self, theta: Array, *, derivatives: bool) -> tuple[Array, Array | None]:
+    def line_rows(self, theta: Array, *, derivatives: bool) -> tuple[Array, Array | None]:
         """Rows of the line table (n_rows, n_items, width), and the distortion velocity."""
         extended = np.append(theta, 0.0)
         masses = self._table.masses
@@ -499,7 +499,7 @@ class AbsorberModel:
 
     def _transmission_slopes(self, theta: Array) -> Array:
         """T and ∂T/∂free of each segment (n_segments, n_local, width); see `Layout`."""
-        rows, velocity = self._line_rows(theta, derivatives=True)
+        rows, velocity = self.line_rows(theta, derivatives=True)
         covered = through = None
         if self.coverings:
             transmission = self._transmission(rows[0], theta)
@@ -546,12 +546,12 @@ class AbsorberModel:
     def predict(self, free: Array) -> list[SegmentPrediction]:
         """What the model predicts for every pixel of every segment."""
         theta = self.parameters.expand(free)
-        rows, _ = self._line_rows(theta, derivatives=False)
+        rows, _ = self.line_rows(theta, derivatives=False)
         tau = rows[0]
         transmission = self._transmission(tau, theta)
         predictions = []
         for k, segment in enumerate(self.segments):
-            size = self._grids[k].size
+            size = self.grids[k].size
             reference = float(segment.wavelength[0])
             everywhere = InstrumentOperator(
                 log_velocity(segment.edges_low, reference),

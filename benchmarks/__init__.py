@@ -1,0 +1,1 @@
+"""Comparisons in one run on one machine: ratios and counts, never absolute times."""

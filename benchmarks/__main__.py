@@ -1,0 +1,5 @@
+"""``python -m benchmarks`` prints the table of ratios."""
+
+from benchmarks.speed import main
+
+main()
