@@ -12,11 +12,13 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
 import argparse
+import shutil
 import subprocess
 import sys
 import time
 import tracemalloc
 from collections.abc import Callable
+from pathlib import Path
 
 import numpy as np
 from scipy.special import wofz
@@ -162,13 +164,13 @@ def cold_start() -> list[tuple[str, str]]:
     """(e) Start of commands against bare Python."""
 
     def run(*arguments: str) -> Callable[[], object]:
-        return lambda: subprocess.run([sys.executable, *arguments], check=True, capture_output=True)
+        return lambda: subprocess.run(arguments, check=True, capture_output=True)
 
-    commands = {
-        "--help": run("-m", "fathomline", "--help"),
-        "lines": run("-m", "fathomline", "lines"),
-    }
-    bare = run("-c", "pass")
+    script = shutil.which("fathomline", path=str(Path(sys.executable).parent))
+    if script is None:
+        return [("(e) cold start", "skipped: the command is not installed beside this Python")]
+    commands = {"--help": run(script, "--help"), "lines": run(script, "lines")}
+    bare = run(sys.executable, "-c", "pass")
     out = []
     for name, command in commands.items():
         pairs = [(best(command, 3), best(bare, 3)) for _ in range(3)]

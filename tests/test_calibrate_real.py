@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from fathomline.cli.main import _run
+from fathomline.cli.main import run
 
 REAL = os.environ.get("FATHOMLINE_REAL_DATA")
 
@@ -31,7 +31,7 @@ EXPECTED = {
 def compare(capsys, ending):
     files = [str(Path(REAL) / f"he2217_{half}{ending}.fits") for half in ("first", "second")]
     ranges = [word for low, high in RANGES for word in ("--range", str(low), str(high))]
-    assert _run(["calibrate", *files, *ranges, "--json"]) == 0
+    assert run(["calibrate", *files, *ranges, "--json"]) == 0
     return json.loads(capsys.readouterr().out)
 
 

@@ -10,7 +10,8 @@ import pytest
 from astropy.io import fits
 from astropy.table import Table
 
-from fathomline.cli.main import _run
+from fathomline.cli import COMMANDS
+from fathomline.cli.main import run
 from fathomline.job.demo import DEMO_DALPHA, write_demo
 from fathomline.report.folder import RESULT_FILES
 
@@ -18,12 +19,12 @@ from fathomline.report.folder import RESULT_FILES
 @pytest.fixture(scope="module")
 def demo(tmp_path_factory):
     folder = tmp_path_factory.mktemp("demo") / "halden-a"
-    assert _run(["demo", str(folder)]) == 0
+    assert run(["demo", str(folder)]) == 0
     return folder
 
 
 def test_demo_prints_a_row_and_the_place_of_the_report(tmp_path, capsys):
-    assert _run(["demo", str(tmp_path / "d")]) == 0
+    assert run(["demo", str(tmp_path / "d")]) == 0
     out = capsys.readouterr().out
     for word in ("Δα/α", "stat", "χ²/ν", "Halden A", "report.html", "stat-only"):
         assert word in out, word
@@ -99,7 +100,7 @@ def test_run_json_records_the_provenance(demo):
 
 
 def test_json_row(demo, capsys):
-    assert _run(["measure", str(demo / "halden-a.toml"), "--json"]) == 0
+    assert run(["measure", str(demo / "halden-a.toml"), "--json"]) == 0
     row = json.loads(capsys.readouterr().out)
     assert row["converged"] is True
     assert row["flags"] == ["stat-only"]
@@ -114,7 +115,7 @@ def test_lmfit_gives_the_same_answer(demo, tmp_path):
         + '\n[fit]\nsolver = "lmfit"\n',
         encoding="utf-8",
     )
-    assert _run(["measure", str(job)]) == 0
+    assert run(["measure", str(job)]) == 0
     first = Table.read(demo / "halden-a.result" / "measurement.ecsv")[0]
     second = Table.read(tmp_path / "second.result" / "measurement.ecsv")[0]
     difference = (first["dalpha_ppm"] - second["dalpha_ppm"]) / first["stat_ppm"]
@@ -137,22 +138,20 @@ def test_simulate_then_measure(demo, tmp_path, capsys):
         "--seed",
         "5",
     ]
-    assert _run(arguments) == 0
-    assert _run(["measure", str(target / "halden-a.toml")]) == 0
+    assert run(arguments) == 0
+    assert run(["measure", str(target / "halden-a.toml")]) == 0
     row = Table.read(target / "halden-a.result" / "measurement.ecsv")[0]
     assert abs(row["dalpha_ppm"] + 12.0) < 3.5 * row["stat_ppm"]
     before = (target / "red.fits").read_bytes()
     capsys.readouterr()
-    assert _run(arguments) == 2  # never overwrites
+    assert run(arguments) == 2  # never overwrites
     assert "already there" in capsys.readouterr().err
     assert (target / "red.fits").read_bytes() == before
 
 
 def test_lines_lists_what_falls_on_a_spectrum(demo, capsys):
     assert (
-        _run(
-            ["lines", "--redshift", "1.15085", "--spectrum", str(demo / "halden-a.fits"), "--json"]
-        )
+        run(["lines", "--redshift", "1.15085", "--spectrum", str(demo / "halden-a.fits"), "--json"])
         == 0
     )
     rows = {row["transition"]: row for row in json.loads(capsys.readouterr().out)}
@@ -162,17 +161,15 @@ def test_lines_lists_what_falls_on_a_spectrum(demo, capsys):
 
 
 def test_inspect_says_what_was_read(demo, capsys):
-    assert _run(["inspect", str(demo / "halden-a.fits")]) == 0
+    assert run(["inspect", str(demo / "halden-a.fits")]) == 0
     out = capsys.readouterr().out
     assert "vacuum" in out
     assert "2.000 km/s" in out
 
 
-@pytest.mark.parametrize(
-    "command", ["demo", "lines", "inspect", "simulate", "calibrate", "measure"]
-)
+@pytest.mark.parametrize("command", list(COMMANDS))
 def test_every_command_has_help_with_an_example(command, capsys):
-    assert _run([command, "--help"]) == 0
+    assert run([command, "--help"]) == 0
     assert "Example" in capsys.readouterr().out
 
 
@@ -252,7 +249,7 @@ def test_bad_job(name, tmp_path, capsys):
 def check_refused(arguments: list[str], pattern: str, capsys) -> None:
     import re
 
-    assert _run(arguments) == 2
+    assert run(arguments) == 2
     captured = capsys.readouterr()
     assert "Traceback" not in captured.err
     assert re.search(pattern, captured.err), captured.err
@@ -264,7 +261,7 @@ def test_several_faults_are_told_at_once(tmp_path, capsys):
     text = job.read_text(encoding="utf-8")
     text = text.replace("Fe II 2374", "Fe II 2375").replace("velocity = 4.0", "velocity = 400.0")
     job.write_text(text, encoding="utf-8")
-    assert _run(["measure", str(job)]) == 2
+    assert run(["measure", str(job)]) == 2
     errors = capsys.readouterr().err.strip().splitlines()
     assert len(errors) == 2
     assert all(line.startswith("error: ") for line in errors)
@@ -308,7 +305,7 @@ def test_a_changed_demo_job_is_left_alone(tmp_path, capsys):
 def test_a_failing_write_keeps_the_earlier_result(demo, tmp_path, monkeypatch, capsys):
     target = tmp_path / "kept.result"
     job = str(demo / "halden-a.toml")
-    assert _run(["measure", job, "-o", str(target)]) == 0
+    assert run(["measure", job, "-o", str(target)]) == 0
     before = {p.name: p.read_bytes() for p in target.iterdir() if p.is_file()}
     capsys.readouterr()
 
@@ -330,6 +327,6 @@ def test_a_result_that_is_not_trustworthy_exits_with_3(demo, tmp_path, capsys):
         text[:second].replace('"halden-a.fits"', f'"{(demo / "halden-a.fits").as_posix()}"'),
         encoding="utf-8",
     )
-    assert _run(["measure", str(job)]) == 3
+    assert run(["measure", str(job)]) == 3
     row = Table.read(Path(job).with_suffix(".result") / "measurement.ecsv")[0]
     assert "poor-fit" in row["flags"]

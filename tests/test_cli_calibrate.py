@@ -10,7 +10,7 @@ import pytest
 from astropy.table import Table
 
 from calibration_support import PIVOT, log_edges, noisy, recorded
-from fathomline.cli.main import _run
+from fathomline.cli.main import run
 from fathomline.job.instrument_tables import Distortion
 from fathomline.report.calibration import CALIBRATION_FILES
 from fathomline.spectra import read_distortion_table, write_spectrum
@@ -41,7 +41,7 @@ def test_two_spectra(spectra, tmp_path, capsys):
     out = tmp_path / "cal"
     options = ["--pivot", str(PIVOT), "--telluric", "-o", str(out)]
     options += ["--range", "5000", "5500", "--range", "5500", "6060"]
-    assert _run(["calibrate", *spectra, *options]) == 0
+    assert run(["calibrate", *spectra, *options]) == 0
     text = capsys.readouterr().out
     for word in ("'one' relative to two.fits", "shift", "slope", "sigma", "scatter", "χ²/ν"):
         assert word in text, word
@@ -64,10 +64,10 @@ def test_two_spectra(spectra, tmp_path, capsys):
 
 def test_own_table_can_be_read_again(spectra, tmp_path, capsys):
     out = tmp_path / "cal"
-    assert _run(["calibrate", *spectra, "--telluric", "-o", str(out), "--json"]) == 0
+    assert run(["calibrate", *spectra, "--telluric", "-o", str(out), "--json"]) == 0
     first = json.loads(capsys.readouterr().out)
     path = str(out / "shifts.ecsv")
-    assert _run(["calibrate", path, "--spectrum", "one", "--json"]) == 0
+    assert run(["calibrate", path, "--spectrum", "one", "--json"]) == 0
     second = json.loads(capsys.readouterr().out)
     assert first["terms"] == second["terms"]
     assert first["covariance"] == second["covariance"]
@@ -88,7 +88,7 @@ def test_table(shifts, tmp_path, capsys):
         "arm",
         "--robust",
     ]
-    assert _run([*command, *more]) == 0
+    assert run([*command, *more]) == 0
     capsys.readouterr()
     text = (out / "distortion.toml").read_text(encoding="utf-8")
     blocks = tomllib.loads(text)["distortion"]
@@ -103,9 +103,9 @@ def test_table(shifts, tmp_path, capsys):
 def test_files_of_an_earlier_run_are_replaced_and_others_kept(shifts, tmp_path, capsys):
     out = tmp_path / "cal"
     command = ["calibrate", str(shifts), "--spectrum", "red", "-o", str(out)]
-    assert _run(command) == 0
+    assert run(command) == 0
     (out / "notes.txt").write_text("mine")
-    assert _run([*command, "--terms", "shift"]) == 0
+    assert run([*command, "--terms", "shift"]) == 0
     assert (out / "notes.txt").read_text() == "mine"
     assert (out / "distortion.toml").read_text(encoding="utf-8").count("[[distortion]]") == 1
     assert not list(out.glob(".*"))
@@ -117,7 +117,7 @@ def test_files_of_other_origin_are_left_alone(shifts, tmp_path, capsys, name):
     out = tmp_path / "other"
     out.mkdir()
     (out / name).write_text("precious")
-    assert _run(["calibrate", str(shifts), "--spectrum", "red", "-o", str(out)]) == 2
+    assert run(["calibrate", str(shifts), "--spectrum", "red", "-o", str(out)]) == 2
     assert name in capsys.readouterr().err
     assert (out / name).read_text() == "precious"
     assert len(list(out.iterdir())) == 1
@@ -125,7 +125,7 @@ def test_files_of_other_origin_are_left_alone(shifts, tmp_path, capsys, name):
 
 def test_figure_is_the_same_on_every_run(shifts, tmp_path, capsys):
     for name in ("a", "b"):
-        assert _run(["calibrate", str(shifts), "--spectrum", "r", "-o", str(tmp_path / name)]) == 0
+        assert run(["calibrate", str(shifts), "--spectrum", "r", "-o", str(tmp_path / name)]) == 0
     capsys.readouterr()
     for name in CALIBRATION_FILES:
         assert (tmp_path / "a" / name).read_bytes() == (tmp_path / "b" / name).read_bytes(), name
@@ -136,7 +136,7 @@ def test_blocks_fit_into_a_job(shifts, tmp_path, capsys):
     odd = 'a "b"\\ $x_1 é\n[x]'
     out = tmp_path / "cal"
     more = ["--terms", "shift,slope,sawtooth", "--order-spacing", "70", "--shared", odd]
-    assert _run(["calibrate", str(shifts), "--spectrum", "red", *more, "-o", str(out)]) == 0
+    assert run(["calibrate", str(shifts), "--spectrum", "red", *more, "-o", str(out)]) == 0
     capsys.readouterr()
     blocks = tomllib.loads((out / "distortion.toml").read_text(encoding="utf-8"))["distortion"]
     assert [block["shared"] for block in blocks] == [
@@ -172,7 +172,7 @@ def test_mistakes_are_told_in_one_message(shifts, spectra, tmp_path, capsys, arg
     bare = tmp_path / "bare.csv"
     bare.write_text("wavelength,velocity\n5000,1\n6000,2\n")
     places = {"shifts": shifts, "one": spectra[0], "two": spectra[1], "bare": bare, "tmp": tmp_path}
-    assert _run(["calibrate", *(a.format(**places) for a in arguments)]) == 2
+    assert run(["calibrate", *(a.format(**places) for a in arguments)]) == 2
     captured = capsys.readouterr()
     assert message in captured.err
     assert "Traceback" not in captured.err

@@ -1,4 +1,4 @@
-"""Entry point: finds the command, turns errors into messages and exit codes.
+"""Finds the command, turns errors into messages and exit codes.
 
 Exit codes: 0 success; 1 a defect of the program; 2 a user's mistake, told in one message; 3
 finished, but the result is flagged as not trustworthy; 130 interrupted.
@@ -14,63 +14,48 @@ from typing import Any
 import click
 
 import fathomline
+from fathomline.cli import COMMANDS, overall_help
 from fathomline.errors import FathomlineError, JobError
 
-__all__ = ["main"]
-
-_COMMANDS = ("demo", "lines", "inspect", "simulate", "calibrate", "measure")
+__all__ = ["run"]
 
 
 class _LateGroup(click.Group):
     """A group whose commands live in one module each, imported when needed."""
 
     def list_commands(self, ctx: click.Context) -> list[str]:
-        return list(_COMMANDS)
+        return list(COMMANDS)
 
     def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
-        if cmd_name not in _COMMANDS:
+        if cmd_name not in COMMANDS:
             return None
         module = importlib.import_module(f"fathomline.cli.{cmd_name}")
         command: click.Command = getattr(module, cmd_name)
         return command
 
-
-_EPILOG = """\b
-Examples:
-  fathomline demo halden-a
-  fathomline lines --ion "Fe II" --redshift 1.15
-  fathomline inspect spectrum.fits
-  fathomline measure absorber.toml
-"""
+    def get_help(self, ctx: click.Context) -> str:
+        return overall_help().rstrip()
 
 
-@click.group(
-    cls=_LateGroup,
-    epilog=_EPILOG,
-    context_settings={"help_option_names": ["-h", "--help"]},
-)
+@click.group(cls=_LateGroup, context_settings={"help_option_names": ["-h", "--help"]})
 @click.version_option(fathomline.__version__, prog_name="fathomline")
 def _group() -> None:
     """Measure Δα/α, the relative change of the fine-structure constant, in quasar absorbers."""
 
 
-def main(arguments: list[str] | None = None) -> None:
-    """Run the command line and exit.
+def run(arguments: list[str]) -> int:
+    """Run one command and return the exit code.
 
     Parameters
     ----------
-    arguments : list of str, optional
-        Default: those of the process.
+    arguments : list of str
+        Without the name of the program.
 
     """
     # numpy is not imported yet. Its threads slow the small matrices of a fit down, several times
     # so when other work shares the cores; whoever wants them sets the variable.
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     os.environ.setdefault("OMP_NUM_THREADS", "1")
-    sys.exit(_run(arguments))
-
-
-def _run(arguments: list[str] | None) -> int:
     try:
         outcome: Any = _group.main(args=arguments, prog_name="fathomline", standalone_mode=False)
     except click.exceptions.Abort:
