@@ -11,9 +11,10 @@ an estimate of C that every accepted step improves from the change of the gradie
 Welsch 1981, ACM Transactions on Mathematical Software 7, 348); whichever of the two predicted the
 last change of χ² better makes the next step.
 
-Columns of J are scaled to unit length, so that a step of length 1 is about 1σ of an uncorrelated
-parameter. With the eigenvalues e and eigenvectors V of the scaled matrix of the model (for
-Gauss–Newton from QR and SVD, which does not square the condition number) the step with |s| ≤ Δ is
+J is reduced to its triangle first (QR), so that all that follows costs n³ and not m n². Its
+columns are scaled to unit length: a step of length 1 is about 1σ of an uncorrelated parameter. With
+the eigenvalues e and eigenvectors V of the scaled matrix of the model (for Gauss–Newton from the
+SVD, which does not square the condition number) the step with |s| ≤ Δ is
 
     s(λ) = −V diag(1/(e + λ)) Vᵀ g,
 
@@ -113,19 +114,18 @@ class _Local:
     ) -> None:
         norm = np.sqrt(np.einsum("ij,ij->j", jacobian, jacobian))
         self.scale = np.where(norm > 0.0, norm, 1.0)
-        q, r = np.linalg.qr(jacobian / self.scale)
-        projected = q.T @ residual
+        scaled = jacobian / self.scale
         if curvature is None:
-            u, singular, vt = np.linalg.svd(r)
+            u, singular, vt = np.linalg.svd(scaled, full_matrices=False)
             known = singular > _RANK * max(singular[0], np.finfo(float).tiny)
+            projected = np.where(known, u.T @ residual, 0.0)
             self.vectors, self.values = vt.T, np.where(known, singular**2, 1.0)
-            self.gradient = np.where(known, singular * (u.T @ projected), 0.0)
-            # p²/e without the square of the singular value
-            self.edm = float(np.sum(np.where(known, u.T @ projected, 0.0) ** 2))
+            self.gradient = singular * projected
+            self.edm = float(projected @ projected)  # p²/e without the square
             return
         outer = np.outer(self.scale, self.scale)
-        self.values, self.vectors = np.linalg.eigh(r.T @ r + curvature / outer)
-        gradient = r.T @ projected
+        self.values, self.vectors = np.linalg.eigh(scaled.T @ scaled + curvature / outer)
+        gradient = scaled.T @ residual
         if bias is not None:
             gradient = gradient + bias / self.scale
         self.gradient = self.vectors.T @ gradient
@@ -293,7 +293,9 @@ class _Point:
         lower: Array,
         upper: Array,
     ) -> None:
-        self.x, self.residual, self.jacobian = x, residual, jacobian
+        # every model of this point, and every part of one, needs only the triangle of J and Qᵀ r
+        triangle = np.asarray(np.linalg.qr(np.column_stack([jacobian, residual]), mode="r"))
+        self.x, self.residual, self.jacobian = x, triangle[:, -1], triangle[:, :-1]
         self.held, self.lower, self.upper = held, lower, upper
 
     def model(self, curvature: Array | None) -> _Local:
