@@ -1,0 +1,1 @@
+"""Comparisons that take longer than a test, or whose outcome is a table."""
