@@ -22,6 +22,7 @@ from fathomline.spectra import (
     GaussianLineSpread,
     Spectrum,
     local_level,
+    read_line_spread,
     spectrum_level,
 )
 from fathomline.spectra.units import guess_unit, parse_unit
@@ -269,6 +270,31 @@ def test_line_spread_refuses(bad):
         GaussianLineSpread(bad)
     with pytest.raises(SpectrumError, match="line-spread function"):
         GaussianLineSpread.from_resolving_power(bad)
+
+
+@pytest.mark.parametrize(
+    ("header", "mark"),
+    [
+        ("velocity,4500,6100", ","),
+        ("velocity 4500 6100", " "),
+        (
+            "# %ECSV 1.0\n# ---\n# datatype:\n# - {name: velocity, datatype: float64}\n"
+            "# - {name: '4500', datatype: float64}\n# - {name: '6100', datatype: float64}\n"
+            'velocity "4500" "6100"',
+            " ",
+        ),
+    ],
+)
+def test_line_spread_table_with_columns_named_by_wavelength(tmp_path, header, mark):
+    velocity = np.linspace(-10.0, 10.0, 41)
+    rows = [(v, np.exp(-(v**2) / 8.0), np.exp(-(v**2) / 18.0)) for v in velocity]
+    lines = [mark.join(f"{x:.17g}" for x in row) for row in rows]
+    (tmp_path / "lsf.txt").write_text("\n".join([header, *lines]))
+    lsf = read_line_spread(tmp_path / "lsf.txt")
+    assert lsf.wavelengths.tolist() == [4500.0, 6100.0]
+    assert lsf.profile_at(6100.0)(velocity) == pytest.approx(
+        np.exp(-(velocity**2) / 18.0) / np.sqrt(18.0 * np.pi), rel=2e-3
+    )
 
 
 def test_line_spread_refuses_negative_errors():

@@ -273,7 +273,7 @@ def read_line_spread(path: str | Path) -> TabulatedLineSpread:
     where = str(path)
     if not path.is_file():
         raise SpectrumError(f"{where}: there is no such file; expected a line-spread table")
-    table = read_text_table(path, where)
+    table = read_text_table(path, where, first_name="velocity")
     names = table.names
     if names is None or "velocity" not in names or len(names) < 2:
         raise SpectrumError(

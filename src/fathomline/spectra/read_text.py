@@ -139,8 +139,10 @@ def _ecsv_header(comments: list[str], where: str) -> tuple[dict[str, str], dict[
     return units, {str(key).upper(): value for key, value in metadata.items()}
 
 
-def read_text_table(path: Path, where: str) -> TextTable:
+def read_text_table(path: Path, where: str, *, first_name: str | None = None) -> TextTable:
     """Parse a text file into fields, names, units and keywords.
+
+    Names hold no number, except in a first row that begins with `first_name`.
 
     Raises
     ------
@@ -195,10 +197,10 @@ def read_text_table(path: Path, where: str) -> TextTable:
     lines = [number for number, _ in rows]
     width = len(fields[-1])
     names: list[str] | None = None
-    first = fields[0]
+    first = [part.strip('"') for part in fields[0]]
     # a bad number in the first row must not turn it into names: names hold no number at all
-    if not any(_is_number(part) for part in first):
-        names, fields, lines = [part.strip('"') for part in first], fields[1:], lines[1:]
+    if first[0] == first_name or not any(_is_number(part) for part in first):
+        names, fields, lines = first, fields[1:], lines[1:]
         if not fields:
             raise SpectrumError(f"{where}: the file has column names but no rows of data")
     elif comments and not ecsv:
