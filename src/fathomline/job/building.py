@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from fathomline.atomic import AtomicData, Transition
 from fathomline.constants import C_KMS, DOPPLER_KMS2
 from fathomline.errors import AtomicDataError, JobError, SpectrumError
+from fathomline.fit import Template
 from fathomline.job.absorption_tables import Blend, Component, Region
 from fathomline.job.inputs import distortion_bases, line_spread
 from fathomline.job.instrument_tables import Spectrum as SpectrumTable
@@ -36,7 +37,7 @@ from fathomline.model import (
 from fathomline.profile import TransitionLines
 from fathomline.spectra import Spectrum, TabulatedLineSpread, local_level
 
-__all__ = ["ALPHA", "BuiltModel", "build_model", "unknown_line"]
+__all__ = ["ALPHA", "BuiltModel", "build_model", "build_template", "unknown_line"]
 
 Array = NDArray[np.float64]
 
@@ -45,6 +46,7 @@ ALPHA = "alpha.dalpha"
 
 _NEGLIGIBLE_DEPTH = 1e-5  # optical depth below which a line is left out of a region
 _BLEND_REACH = 100.0  # km/s that a blend may move from its redshift
+_PROBE_B, _PROBE_COLUMN = 5.0, 13.5  # km/s and log10 cm⁻² of a cloud that may lie anywhere
 _GROWTH = 1.0  # dex that a column density may gain during the fit before that matters
 
 
@@ -500,6 +502,53 @@ def build_model(job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> Bui
         heavy=heavy,
     )
     return BuiltModel(job, tuple(spectra), atoms, model, tuple(transitions))
+
+
+def build_template(job: Job, spectra: Sequence[Spectrum], atoms: AtomicData) -> Template:
+    """Everything of a job's model but its components and blends, for the structure search.
+
+    Every ion that a region is about may absorb anywhere in the windows of its regions.
+
+    Raises
+    ------
+    JobError
+        As `build_model`.
+
+    """
+    builder = _Builder(job, spectra, atoms)
+    alpha = builder.number(ALPHA, job.alpha.dalpha, "dalpha")
+    heavy = builder.heavy_magnesium()
+    fwhm = {table.id: _put_fwhm(builder, i, table) for i, table in enumerate(job.spectra)}
+    builder.put_distortions()
+    windows: dict[str, tuple[float, float]] = {}
+    for region in job.regions:
+        if region.redshift is None:
+            low, high = windows.get(region.ion, region.window)
+            windows[region.ion] = min(low, region.window[0]), max(high, region.window[1])
+    nothing = ComponentTerms(0, {})
+    for ion, window in windows.items():
+        lines = [line for line in atoms.find(ion=ion, extra=True) if line.ground]
+        for velocity in window:
+            builder.absorptions.append(
+                _Absorption(
+                    nothing, ion, lines, job.absorber.redshift, velocity, _PROBE_B, _PROBE_COLUMN
+                )
+            )
+    segments: list[SegmentTerms] = []
+    for i, region in enumerate(job.regions):
+        transition = builder.transition(i, region)
+        if transition is not None:
+            segments += builder.segments(i, region, transition, fwhm)
+    if builder.faults:
+        raise JobError(builder.faults)
+    return Template(
+        job.absorber.redshift,
+        tuple(builder.parameters),
+        alpha,
+        tuple(segments),
+        windows,
+        heavy,
+    )
 
 
 def _put_fwhm(builder: _Builder, i: int, table: SpectrumTable) -> int:

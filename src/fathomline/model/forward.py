@@ -25,7 +25,7 @@ array operations however many components there are:
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from typing import Any
 
 import numpy as np
@@ -540,6 +540,42 @@ class AbsorberModel:
                 if row < self._layout.width - 1:
                     by_shift = slopes[k, -2] / (C_MS + velocity[k])
                     slopes[k, row] += self.parameters.ratio[position] * basis * by_shift
+
+    def response(self, free: Array) -> list[tuple[Array, Callable[[Array], Array]]]:
+        """How the pixels of each segment respond to more optical depth.
+
+        Returns
+        -------
+        list of (array (n_fine,), callable)
+            For each segment 1/λ (Å⁻¹) of the true wavelengths on the fine grid, and a function from
+            additional optical depths (n_fine, m), small, to the change of the residuals
+            (n_good, m), with the sign of absorption that the data still lack: residual per depth.
+
+        """
+        theta = self.parameters.expand(free)
+        rows, velocity = self.line_rows(theta, derivatives=False)
+        transmission = self._transmission(rows[0], theta)
+        matrix = self._instrument(theta)
+        polynomial = self._polynomial(theta)
+        width = self._table.width
+        out: list[tuple[Array, Callable[[Array], Array]]] = []
+        for k, grid in enumerate(self.grids):
+            inverse = grid.inverse
+            if velocity is not None:
+                inverse = inverse * (1.0 + velocity[k, : grid.size] / C_MS)
+            own = slice(self.rows[k], self.rows[k + 1])
+            block = matrix[own, k * width : k * width + grid.size]
+            scale = (polynomial * self._weight)[own, None]
+            through = transmission[k, : grid.size, None]
+
+            def absorb(
+                tau: Array, block: Any = block, scale: Array = scale, through: Array = through
+            ) -> Array:
+                change: Array = scale * (block @ (through * tau))
+                return -change
+
+            out.append((inverse, absorb))
+        return out
 
     # -- for tables and plots ---------------------------------------------------------------
 

@@ -115,6 +115,16 @@ class TransitionLines:
         self.gamma = transition.gamma or 0.0
         self.q = transition.q or 0.0
 
+    @classmethod
+    def bare(cls, wavelength: float) -> TransitionLines:
+        """A line of which only the wavelength (Å) is known, with f = 1 and no damping."""
+        lines = object.__new__(cls)
+        lines.name = f"{wavelength:.3f}"
+        lines.masses, lines.omega = np.ones(1), np.array([1e8 / wavelength])
+        lines.strength, lines.by_heavy = np.ones(1), np.zeros(1)
+        lines.gamma = lines.q = 0.0
+        return lines
+
     @property
     def rest(self) -> Array:
         """Rest wavelengths (n_lines,) at α0, Å."""
