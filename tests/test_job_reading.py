@@ -117,7 +117,7 @@ ZOO = [
     ({42: "[[fit]]"}, 42, "[fit]: expected a table, found an array"),
     ({2: "fit = 3", 42: "", 43: "", 44: ""}, 2, "[fit]: expected a table, found the number 3"),
     ({42: "[budget]", 43: "", 44: ""}, 42, "[budget]: not available in this version"),
-    ({42: "[structure]", 43: "", 44: ""}, 42, "not available in this version"),
+    ({42: "[budget]", 43: "", 44: ""}, 42, "not available in this version"),
     # Absorber
     ({4: ""}, 3, "[absorber] 'name': missing"),
     ({4: "name = 12"}, 4, "[absorber] 'name': expected text, found the number 12"),
@@ -271,8 +271,6 @@ def test_empty_and_minimal_documents():
     assert faults_in("") == (
         "halden.toml:1: [[spectrum]]: missing; at least one is needed",
         "halden.toml:1: [[region]]: missing; at least one is needed",
-        "halden.toml:1: [[component]]: missing; at least one is needed "
-        "(structure search is not available in this version)",
         "halden.toml:1: 'schema': missing; write schema = 1",
         "halden.toml:1: [absorber]: missing",
     )

@@ -33,19 +33,30 @@ Example:
     type=click.Path(path_type=Path),
     help="Result folder; default: JOB with the ending .result.",
 )
+@click.option(
+    "--workers",
+    type=click.IntRange(min=1),
+    help="Processes for an ensemble of structure searches; default: the number of cores.",
+)
 @click.option("--json", "as_json", is_flag=True, help="Print the rows as JSON.")
-def measure(jobs: tuple[Path, ...], output: Path | None, as_json: bool) -> int:
+def measure(jobs: tuple[Path, ...], output: Path | None, workers: int | None, as_json: bool) -> int:
     """Fit each JOB and write its result folder: tables, model, figures, report.
 
     Exits with 3 when a result is flagged as not trustworthy.
     """
     if output is not None and len(jobs) > 1:
         raise click.UsageError("-o names one folder, but several jobs are given")
-    codes = [run_job(job, output, as_json=as_json) for job in jobs]
+    codes = [run_job(job, output, workers=workers, as_json=as_json) for job in jobs]
     return max(codes)
 
 
-def run_job(job_file: Path, output: Path | None, *, as_json: bool = False) -> int:
+def run_job(
+    job_file: Path,
+    output: Path | None,
+    *,
+    workers: int | None = None,
+    as_json: bool = False,
+) -> int:
     """Measure one job, write its result, print its row, and return the exit code."""
     from fathomline.cli.console import progress
     from fathomline.job import read_job
@@ -57,7 +68,7 @@ def run_job(job_file: Path, output: Path | None, *, as_json: bool = False) -> in
     check_target(folder)
     command = f"fathomline measure {shlex.quote(job_file.name)}"
     with progress(job.absorber.name) as tell:
-        measurement = measure_job(job, progress=tell)
+        measurement = measure_job(job, progress=tell, workers=workers)
         tell("writing tables, figures and report", None)
         write_result(measurement, folder, command=command)
     _print_row(measurement, folder, as_json=as_json)

@@ -7,6 +7,7 @@ from fathomline.fit.lmfit_bridge import free_vector, minimise_with_lmfit, to_lmf
 from fathomline.fit.result import FitResult, Restart, aicc
 from fathomline.fit.structure import (
     CRITERIA,
+    WIDTH_LIMITS,
     Cloud,
     Found,
     Interloper,
@@ -20,6 +21,7 @@ __all__ = [
     "CAUTIONS",
     "CRITERIA",
     "FLAGS",
+    "WIDTH_LIMITS",
     "Cloud",
     "Covariance",
     "FitResult",

@@ -20,7 +20,8 @@ cloud, an interloper is tried as well, and the criterion decides.
 
 Criteria, for χ², n data and p free parameters: AIC = χ² + 2p; AICc adds 2p(p+1)/(n − p − 1)
 (Hurvich & Tsai 1989, Biometrika 76, 297); BIC = χ² + p ln n (Schwarz 1978, Annals of Statistics 6,
-461).
+461). To each comes 6 for a cloud and 12 for an interloper, because their places are the best of
+many: without it AICc fits noise.
 """
 
 from __future__ import annotations
@@ -47,6 +48,7 @@ from fathomline.profile import TransitionLines
 
 __all__ = [
     "CRITERIA",
+    "WIDTH_LIMITS",
     "Cloud",
     "Found",
     "Interloper",
@@ -75,7 +77,9 @@ CRITERIA: dict[str, Callable[[float, int, int], float]] = {
 """Information criteria: (χ², number of data, number of free parameters) → value; low is good."""
 
 _WIDTHS = (2.0, 4.0, 8.0)  # km/s of the clouds that the score test looks for
-_B_BOUNDS = (1.0, 30.0)  # km/s
+WIDTH_LIMITS = (1.0, 30.0)
+"""Smallest and largest Doppler parameter (or turbulent part of it) of a cloud, km/s."""
+
 _T_BOUNDS = (100.0, 1e5)  # K
 _START_T = 8000.0
 _LOG_COLUMNS = (9.0, 17.0)
@@ -84,7 +88,10 @@ _SEED_GAIN = 40.0  # gain of a cloud that may be added together with others at t
 _SEED_DISTANCE = 9.0  # km/s between those
 _LEAST_GAIN = 4.0  # a gain below this cannot pay for a cloud under any criterion
 _INTERLOPER_GAIN = 25.0  # of a line that may lie anywhere in any region, seen in one only
-_INTERLOPER_PAY = 10.0  # and what the criterion must fall by
+# The place of a cloud is the best of many, that of an interloper the best of many more; the
+# criteria count parameters and know nothing of that. Noise alone gains 2 ln(number of places).
+_CLOUD_COST = 6.0
+_INTERLOPER_COST = 12.0
 _WEAK = 12.0  # χ² that an ion or a cloud must be worth (Wald) to be left in peace
 
 
@@ -170,7 +177,7 @@ class Template:
             low = min(self.windows[ion][0] for ion in cloud.log_columns)
             high = max(self.windows[ion][1] for ion in cloud.log_columns)
             thermal = cloud.temperature is not None
-            width = put(f"{name}.{'b_turb' if thermal else 'b'}", cloud.b, _B_BOUNDS)
+            width = put(f"{name}.{'b_turb' if thermal else 'b'}", cloud.b, WIDTH_LIMITS)
             components.append(
                 ComponentTerms(
                     velocity=put(f"{name}.velocity", cloud.velocity, (low, high)),
@@ -273,6 +280,12 @@ class Found:
     complete: bool = True
 
     @property
+    def cost(self) -> float:
+        """What the search lowers: the criterion, and a price for each place chosen among many."""
+        places = _CLOUD_COST * len(self.clouds) + _INTERLOPER_COST * len(self.interlopers)
+        return self.criterion + places
+
+    @property
     def values(self) -> dict[str, float]:
         """Best value of every parameter, by name."""
         theta = self.model.parameters.expand(self.minimum.x)
@@ -360,16 +373,15 @@ class _Search:
         best: Found | None = None
         for _, cloud in places[:_TRIES]:
             trial = self.fit([*found.clouds, self.dressed(cloud)], found.interlopers, found.values)
-            if best is None or trial.criterion < best.criterion:
+            if best is None or trial.cost < best.cost:
                 best = trial
-            if best.criterion < found.criterion - _LEAST_GAIN:
+            if best.cost < found.cost - _LEAST_GAIN:
                 break
         for _, line in scores.interlopers(_INTERLOPER_GAIN)[:1]:
             trial = self.fit(found.clouds, [*found.interlopers, line], found.values)
-            pays = trial.criterion < found.criterion - _INTERLOPER_PAY
-            if pays and (best is None or trial.criterion < best.criterion):
+            if best is None or trial.cost < best.cost:
                 best = trial
-        return best if best is not None and best.criterion < found.criterion else None
+        return best if best is not None and best.cost < found.cost else None
 
     def dressed(self, cloud: Cloud) -> Cloud:
         """A cloud with a temperature where the search wants one, and a seeded start width."""
@@ -394,7 +406,7 @@ class _Search:
             if not chosen or room <= 0:
                 return found
             trial = self.fit([*found.clouds, *chosen[:room]], found.interlopers, found.values)
-            if trial.criterion >= found.criterion:
+            if trial.cost >= found.cost:
                 return found
             found = trial
             self.record(found, f"start with {len(chosen[:room])} more")
@@ -408,7 +420,7 @@ class _Search:
             if not clouds:
                 continue
             trial = self.fit(clouds, interlopers, found.values if clouds else None)
-            if trial.criterion < found.criterion:
+            if trial.cost < found.cost:
                 return trial
         return None
 
@@ -473,7 +485,7 @@ class _Search:
         cloud = found.clouds[k]
         others = [c for i, c in enumerate(found.clouds) if i != k]
         close = any(abs(c.velocity - cloud.velocity) < 1.5 for c in others)
-        return close or cloud.b <= 1.05 * _B_BOUNDS[0] or cloud.b >= 0.95 * _B_BOUNDS[1]
+        return close or cloud.b <= 1.05 * WIDTH_LIMITS[0] or cloud.b >= 0.95 * WIDTH_LIMITS[1]
 
     # -- all ----------------------------------------------------------------------------------
 

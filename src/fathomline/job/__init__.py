@@ -24,6 +24,7 @@ from fathomline.job.schema import (
     Region,
     Resolution,
     Spectrum,
+    Structure,
 )
 from fathomline.job.writing import job_to_data, job_to_toml, write_job
 
@@ -47,6 +48,7 @@ __all__ = [
     "Region",
     "Resolution",
     "Spectrum",
+    "Structure",
     "build_job",
     "canonical_json",
     "job_digest",

@@ -14,13 +14,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 import fathomline
-from fathomline.fit import CAUTIONS, FLAGS, FitResult, FitSettings, fit_model
+from fathomline.atomic import AtomicData
+from fathomline.errors import JobError
+from fathomline.fit import CAUTIONS, FLAGS, FitResult, FitSettings, Step, fit_model
 from fathomline.job.building import ALPHA, BuiltModel, build_model
 from fathomline.job.digest import job_digest
+from fathomline.job.ensemble import Ensemble, run_ensemble
 from fathomline.job.inputs import load_atoms, load_spectra
 from fathomline.job.schema import Job
+from fathomline.job.structure import job_with_structure, search_job
 from fathomline.model import SegmentPrediction, SegmentTerms
-from fathomline.spectra import noise_correlation
+from fathomline.spectra import Spectrum, noise_correlation
 
 __all__ = ["STAT_ONLY", "Measurement", "RegionShare", "measure"]
 
@@ -29,6 +33,12 @@ Progress = Callable[[str, float | None], None]
 
 STAT_ONLY = "stat-only"
 """Flag of a result without a systematic error budget."""
+
+STRUCTURE_ONLY = "structure-only"
+"""Flag of a result whose error budget has the velocity structure and nothing else."""
+
+INTERRUPTED = "interrupted"
+"""Flag of a result whose structure search was interrupted."""
 
 _MAX_RESAMPLINGS = 4
 
@@ -84,6 +94,13 @@ class Measurement:
     correlated_stat : float or None
         Statistical error of Δα/α, ppm, if the noise has that correlation; None where nothing is
         stated. `stat` does not include it.
+    asked : Job
+        The job as it was given; `built.job` has the structure that was found.
+    history : tuple of Step
+        The structure search, empty where components were given.
+    ensemble : Ensemble or None
+    interrupted : bool
+        Whether the search was stopped before it was done.
     timings : dict
         Seconds by stage.
     started : datetime
@@ -99,13 +116,17 @@ class Measurement:
     digest: str
     correlation: dict[str, float]
     correlated_stat: float | None
+    asked: Job
+    history: tuple[Step, ...]
+    ensemble: Ensemble | None
+    interrupted: bool
     timings: dict[str, float]
     started: datetime
     warnings: list[str] = field(default_factory=list)
 
     @property
     def job(self) -> Job:
-        """The job as it was read."""
+        """The job that was fitted; components that were found are in it."""
         return self.built.job
 
     @property
@@ -121,11 +142,19 @@ class Measurement:
     @property
     def flags(self) -> tuple[str, ...]:
         """All flags of the row in the measurement table."""
-        return (*self.fit.flags, STAT_ONLY)
+        stopped = (INTERRUPTED,) if self.interrupted else ()
+        budget = STAT_ONLY if self.ensemble is None else STRUCTURE_ONLY
+        return (*self.fit.flags, *stopped, budget)
 
     def flag_meanings(self) -> dict[str, str]:
         """The flags of this measurement and what they mean."""
-        meanings = {**FLAGS, **CAUTIONS, STAT_ONLY: "no systematic error budget was made"}
+        meanings = {
+            **FLAGS,
+            **CAUTIONS,
+            STAT_ONLY: "no systematic error budget was made",
+            STRUCTURE_ONLY: "of the systematic errors only that of the velocity structure is known",
+            INTERRUPTED: "the structure search was interrupted; this is the best model until then",
+        }
         return {flag: meanings[flag] for flag in self.flags}
 
     def error(self, name: str) -> float | str:
@@ -147,7 +176,7 @@ class Measurement:
     @property
     def trustworthy(self) -> bool:
         """Whether no flag says that the result should not be trusted."""
-        return not any(flag in FLAGS for flag in self.fit.flags)
+        return not self.interrupted and not any(flag in FLAGS for flag in self.fit.flags)
 
     def versions(self) -> dict[str, str]:
         """Versions of this program, of Python and of the numerical packages."""
@@ -197,6 +226,20 @@ class Measurement:
             "pixel_correlation": {
                 "by_spectrum": self.correlation,
                 "stat_ppm_with_it": self.correlated_stat,
+            },
+            "structure": {
+                "searched": bool(self.history),
+                "steps": len(self.history),
+                "interrupted": self.interrupted,
+                "ensemble": None
+                if self.ensemble is None
+                else {
+                    "members": len(self.ensemble.members),
+                    "accepted": len(self.ensemble.accepted),
+                    "mean_ppm": self.ensemble.mean,
+                    "between_models_ppm": self.ensemble.between,
+                    "failures": list(self.ensemble.failures),
+                },
             },
             "timings_s": {name: round(value, 3) for name, value in self.timings.items()},
             "warnings": self.warnings,
@@ -316,17 +359,22 @@ def _alpha_alone(names: tuple[str, ...], jacobian: Array) -> Array:
     return left
 
 
-def measure(job: Job, *, progress: Progress | None = None) -> Measurement:
+def measure(
+    job: Job, *, progress: Progress | None = None, workers: int | None = None
+) -> Measurement:
     """Measure Δα/α for one absorber.
 
-    Reads the spectra, builds the model, fits it, proves the convergence by restarts, and repeats
-    the fit on a finer grid if the fitted lines turn out to need one.
+    Reads the spectra, searches the velocity structure where the job asks for it, builds the model,
+    fits it, proves the convergence by restarts, and repeats the fit on a finer grid if the fitted
+    lines turn out to need one.
 
     Parameters
     ----------
     job : Job
     progress : callable, optional
         Called with a text and, during fits, χ².
+    workers : int, optional
+        Processes for an ensemble of structure searches; default: the number of cores.
 
     Raises
     ------
@@ -351,7 +399,13 @@ def measure(job: Job, *, progress: Progress | None = None) -> Measurement:
     tell("reading spectra")
     spectra = load_spectra(job)
     lap("read")
-    built = build_model(job, spectra, load_atoms(job))
+    atoms, asked = load_atoms(job), job
+    history: tuple[Step, ...] = ()
+    ensemble, interrupted = None, False
+    if job.searches:
+        job, history, ensemble, interrupted = _structure(job, spectra, atoms, tell, workers)
+        lap("structure")
+    built = build_model(job, spectra, atoms)
     settings = FitSettings(
         solver=job.fit.solver,
         restarts=job.fit.restarts,
@@ -375,13 +429,51 @@ def measure(job: Job, *, progress: Progress | None = None) -> Measurement:
         predictions,
         shares,
         resamplings,
-        job_digest(job),
+        job_digest(asked),
         correlation,
         _correlated_stat(built, fit, correlation),
+        asked,
+        history,
+        ensemble,
+        interrupted,
         timings,
         started,
         warnings,
     )
+
+
+def _structure(
+    job: Job,
+    spectra: tuple[Spectrum, ...],
+    atoms: AtomicData,
+    tell: Progress,
+    workers: int | None,
+) -> tuple[Job, tuple[Step, ...], Ensemble | None, bool]:
+    """The job with the structure that was found, and how it was found."""
+
+    def told(step: Step) -> None:
+        text = f"structure: {step.n_components} components, {step.action}, {step.seconds:.0f} s"
+        tell(text, step.chi2)
+
+    found = search_job(job, spectra, atoms, told)
+    if not found.clouds:
+        raise JobError(
+            f"{job.locate('structure')}: the structure search found no absorption in the regions; "
+            "check the redshift and the windows"
+        )
+    best = found.clouds, found.interlopers, found.values[ALPHA]
+    ensemble = None
+    if job.structure.ensemble and found.complete:
+        ensemble = run_ensemble(
+            job,
+            spectra,
+            atoms,
+            workers=workers,
+            report=lambda done, of: tell(f"ensemble: {done} of {of} searches done", None),
+        )
+        first = ensemble.members[0]
+        best = first.clouds, first.interlopers, first.dalpha
+    return job_with_structure(job, *best), found.history, ensemble, not found.complete
 
 
 def _fit_with_fine_enough_grid(

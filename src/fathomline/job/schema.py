@@ -54,14 +54,13 @@ __all__ = [
     "Region",
     "Resolution",
     "Spectrum",
+    "Structure",
     "attach",
     "unsupported_schema",
 ]
 
 #: Versions of the job file that can be read.
 SUPPORTED_SCHEMAS = (1,)
-
-_NOT_YET = "not available in this version"
 
 
 class Absorber(Table):
@@ -101,6 +100,24 @@ class Fit(Table):
     seed: Annotated[Whole, between(0, 2.0**63, "a whole number from 0")] = 1
 
 
+class Structure(Table):
+    """How components are found where none, or only some, are given.
+
+    `search` None stands for: only where no component is given. `criterion` decides what pays;
+    `broadening` is the law of the components that are found; `seed` is that of the order in which
+    places are tried, and 0 takes the best place first.
+    """
+
+    search: Flag | None = None
+    criterion: Annotated[Literal["AICc", "AIC", "BIC"], choice("AICc", "AIC", "BIC")] = "AICc"
+    broadening: Annotated[Literal["turbulent", "thermal"], choice("turbulent", "thermal")] = (
+        "turbulent"
+    )
+    max_components: Annotated[Whole, between(1, 1000, "a count from 1 to 1000")] = 60
+    ensemble: Annotated[Whole, between(0, 1000, "a count from 0 to 1000")] = 0
+    seed: Annotated[Whole, between(0, 2.0**63, "a whole number from 0")] = 1
+
+
 class Job(Table):
     """A whole job: one absorber, its spectra, regions and components, and how to fit them.
 
@@ -108,7 +125,7 @@ class Job(Table):
     the keys of the file. Equality does not depend on where a job was read from.
     """
 
-    later_keys: ClassVar[frozenset[str]] = frozenset({"structure", "budget"})
+    later_keys: ClassVar[frozenset[str]] = frozenset({"budget"})
 
     schema_version: Whole = Field(alias="schema")
     absorber: Absorber
@@ -128,6 +145,7 @@ class Job(Table):
     coverings: Annotated[tuple[Covering, ...], entries_of("covering")] = Field(
         default=(), alias="covering"
     )
+    structure: Structure = Structure()
     fit: Fit = Fit()
 
     _source: TomlSource = PrivateAttr(default_factory=TomlSource)
@@ -138,13 +156,18 @@ class Job(Table):
         unsupported = unsupported_schema(data)
         if unsupported is not None:
             yield unsupported
-        for section, reason in (
-            ("spectrum", ""),
-            ("region", ""),
-            ("component", f" (structure search is {_NOT_YET})"),
-        ):
+        for section in ("spectrum", "region"):
             if data.get(section, []) in ([], ()):
-                yield Fault((section,), f"missing; at least one is needed{reason}")
+                yield Fault((section,), "missing; at least one is needed")
+        structure = data.get("structure")
+        if (
+            data.get("component", []) in ([], ())
+            and isinstance(structure, Mapping)
+            and structure.get("search") is False
+        ):
+            yield Fault(
+                ("component",), "missing; give at least one, or write search = true in [structure]"
+            )
 
     def value_faults(self) -> Iterator[Fault]:
         """Names are unique and known, ties lead somewhere."""
@@ -178,6 +201,11 @@ class Job(Table):
             coverings=self.coverings,
         )
 
+    @property
+    def searches(self) -> bool:
+        """Whether the structure is to be searched for."""
+        return not self.components if self.structure.search is None else self.structure.search
+
     def numbers(self) -> dict[Reference, Number]:
         """All numbers of the model by reference.
 
@@ -190,6 +218,16 @@ class Job(Table):
         """The start value of each of the `numbers`, ties followed, in the units of the keys."""
         values = start_values(self.numbers())
         return {reference: value for reference, value in values.items() if value is not None}
+
+    @property
+    def name(self) -> str:
+        """What messages call the job: the file name as it was given."""
+        return self._source.name
+
+    @property
+    def folder(self) -> Path:
+        """Folder that relative file names start at."""
+        return self._source.folder
 
     def locate(self, *path: str | int) -> str:
         """Where a key was written, such as ``"halden.toml:23"``.

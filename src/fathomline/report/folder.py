@@ -18,7 +18,9 @@ import numpy as np
 
 from fathomline.errors import ResultError
 from fathomline.job import write_job
+from fathomline.job.ensemble import Ensemble
 from fathomline.job.measurement import Measurement
+from fathomline.job.structure import job_with_structure
 from fathomline.report.figures import save_figures
 from fathomline.report.page import render_report
 from fathomline.report.tables import (
@@ -26,6 +28,7 @@ from fathomline.report.tables import (
     components_table,
     covariance_table,
     measurement_table,
+    models_table,
     transitions_table,
 )
 
@@ -125,6 +128,8 @@ def write_result(measurement: Measurement, folder: Path, *, command: str = "") -
         }
         for name, table in tables.items():
             table.write(fresh / f"{name}.ecsv", format="ascii.ecsv", delimiter=",")
+        if measurement.ensemble is not None:
+            _write_models(measurement, measurement.ensemble, fresh)
         _write_model(measurement, fresh / "model.fits")
         write_job(measurement.job, fresh / "job.toml")
         figures = fresh / "figures"
@@ -137,6 +142,19 @@ def write_result(measurement: Measurement, folder: Path, *, command: str = "") -
         (fresh / "run.json").write_text(
             json.dumps(provenance, indent=2, ensure_ascii=False) + "\n", encoding="utf-8"
         )
+
+
+def _write_models(measurement: Measurement, ensemble: Ensemble, folder: Path) -> None:
+    """Table of the ensemble, and a job for each of its structures."""
+    table = models_table(measurement)
+    table.write(folder / "models.ecsv", format="ascii.ecsv", delimiter=",")
+    models = folder / "models"
+    models.mkdir()
+    for k, member in enumerate(ensemble.members, start=1):
+        job = job_with_structure(
+            measurement.asked, member.clouds, member.interlopers, member.dalpha
+        )
+        write_job(job, models / f"model-{k}.toml")
 
 
 def _write_model(measurement: Measurement, path: Path) -> None:

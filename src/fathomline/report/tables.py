@@ -20,12 +20,14 @@ __all__ = [
     "components_table",
     "covariance_table",
     "measurement_table",
+    "models_table",
     "transitions_table",
 ]
 
 Table = Any  # astropy.table.Table, which is imported late
 
 Cell = float | int | bool | str | None
+Column = tuple[str, str | None, str, list[Cell]]
 
 
 def _table(columns: Iterable[tuple[str, str | None, str, list[Cell]]], **meta: str) -> Table:
@@ -110,20 +112,56 @@ def budget_table(m: Measurement) -> Table:
             f"neighbouring pixels: {which}; not included in stat_ppm"
         )
         rows.append(("pixel correlation", float(np.sqrt(max(more, 0.0))), note))
+    kinds: list[Cell] = ["statistical"] * len(rows)
+    methods: list[Cell] = ["covariance"] * len(rows)
+    refits: list[Cell] = [0] * len(rows)
+    if m.ensemble is not None:
+        note = (
+            f"scatter of {len(m.ensemble.accepted)} accepted structures of "
+            f"{len(m.ensemble.members)}; average {m.ensemble.mean:.4g} ppm; see models.ecsv"
+        )
+        rows.append(("velocity structure", m.ensemble.between, note))
+        kinds.append("systematic")
+        methods.append("ensemble")
+        refits.append(sum(member.count for member in m.ensemble.members))
     n = len(rows)
     response = "signed shift per unit of the shared error, 1e-6"
     return _table(
         [
             ("term", None, "name of the term", [row[0] for row in rows]),
-            ("kind", None, "statistical or systematic", ["statistical"] * n),
+            ("kind", None, "statistical or systematic", kinds),
             ("shift_ppm", None, "shift of dalpha/alpha, 1e-6", [None] * n),
             ("sigma_ppm", None, "1 sigma error, 1e-6", [row[1] for row in rows]),
-            ("method", None, "how it was found", ["covariance"] * n),
-            ("n_refits", None, "refits behind it", [0] * n),
+            ("method", None, "how it was found", methods),
+            ("n_refits", None, "refits behind it", refits),
             ("shared", None, "tag shared with other absorbers", [""] * n),
             ("response_ppm", None, response, [None] * n),
             ("note", None, "remark", [row[2] for row in rows]),
         ]
+    )
+
+
+def models_table(m: Measurement) -> Table:
+    """One row per structure of the ensemble, the best first; jobs of the same number re-open it."""
+    members = () if m.ensemble is None else m.ensemble.members
+    accepted = set() if m.ensemble is None else {id(a) for a in m.ensemble.accepted}
+    return _table(
+        [
+            ("model", None, "number; models/model-N.toml", list(range(1, len(members) + 1))),
+            ("n_components", None, "velocity components", [len(x.clouds) for x in members]),
+            ("n_interlopers", None, "lines in one region", [len(x.interlopers) for x in members]),
+            ("broadening", None, "law", ["thermal" if x.thermal else "turbulent" for x in members]),
+            ("criterion", None, "that the search followed", [x.criterion for x in members]),
+            ("seed", None, "of the search", [x.seed for x in members]),
+            ("n_searches", None, "searches that ended here", [x.count for x in members]),
+            ("n_free", None, "free parameters", [x.n_free for x in members]),
+            ("chi2", None, "chi squared", [x.chi2 for x in members]),
+            ("aicc", None, "Akaike criterion with small-sample term", [x.aicc for x in members]),
+            ("dalpha_ppm", None, "relative change of alpha, 1e-6", [x.dalpha for x in members]),
+            ("stat_ppm", None, "statistical error, 1e-6", [x.stat for x in members]),
+            ("accepted", None, "whether it counts", [id(x) in accepted for x in members]),
+        ],
+        absorber=m.job.absorber.name,
     )
 
 
