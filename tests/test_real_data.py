@@ -1,4 +1,4 @@
-"""Two absorbers of a real quasar spectrum, fitted with the jobs in ``examples``.
+"""Three absorbers of a real quasar spectrum, fitted with the jobs in ``examples``.
 
 The folder of the spectra is named by the environment variable FATHOMLINE_REAL_DATA.
 Based on observations collected at the European Southern Observatory, public archive, UVES,
@@ -24,7 +24,9 @@ FOLDER = "FATHOMLINE_REAL_DATA"
 EXAMPLES = Path(__file__).parent.parent / "examples"
 C_KMS = 299792.458
 CASES = [
-    (name, aligned) for name in ("he2217-z0.9424", "he2217-z1.6279") for aligned in (False, True)
+    (name, aligned)
+    for name in ("he2217-z0.9424", "he2217-z1.5558", "he2217-z1.6279")
+    for aligned in (False, True)
 ]
 
 pytestmark = [

@@ -80,7 +80,10 @@ def synthetic_grid(job: Job, atoms: AtomicData, spectrum: str, pixel: float) -> 
     """
     z = job.absorber.redshift
     limits = [
-        atoms[region.transition].observed_wavelength(z) * (1.0 + v / C_KMS)
+        atoms[region.transition].observed_wavelength(
+            z if region.redshift is None else region.redshift
+        )
+        * (1.0 + v / C_KMS)
         for region in job.regions
         if region.spectra is None or spectrum in region.spectra
         for v in (region.window[0] - _MARGIN_KMS, region.window[1] + _MARGIN_KMS)
