@@ -17,6 +17,7 @@ import fathomline
 from fathomline.atomic import AtomicData
 from fathomline.errors import JobError
 from fathomline.fit import CAUTIONS, FLAGS, FitResult, FitSettings, Step, fit_model
+from fathomline.job.adequacy import Adequacy, judge
 from fathomline.job.building import ALPHA, BuiltModel, build_model
 from fathomline.job.digest import job_digest
 from fathomline.job.ensemble import Ensemble, run_ensemble
@@ -101,6 +102,8 @@ class Measurement:
     ensemble : Ensemble or None
     interrupted : bool
         Whether the search was stopped before it was done.
+    adequacy : Adequacy
+        Tests of the residuals, and signs of overfitting.
     timings : dict
         Seconds by stage.
     started : datetime
@@ -120,6 +123,7 @@ class Measurement:
     history: tuple[Step, ...]
     ensemble: Ensemble | None
     interrupted: bool
+    adequacy: Adequacy
     timings: dict[str, float]
     started: datetime
     warnings: list[str] = field(default_factory=list)
@@ -240,6 +244,11 @@ class Measurement:
                     "between_models_ppm": self.ensemble.between,
                     "failures": list(self.ensemble.failures),
                 },
+            },
+            "adequacy": {
+                "composite_runs_sigma": self.adequacy.composite.runs,
+                "composite_correlation": self.adequacy.composite.correlation,
+                "overfitting": list(self.adequacy.overfitting),
             },
             "timings_s": {name: round(value, 3) for name, value in self.timings.items()},
             "warnings": self.warnings,
@@ -423,6 +432,14 @@ def measure(
     ]
     warnings += _degeneracies(fit)
     correlation = _correlation(built, warnings)
+    adequacy = judge(built, fit, predictions, correlation)
+    warnings += adequacy.overfitting
+    problems = adequacy.composite.problems()
+    if problems:
+        warnings.append(
+            f"residuals averaged over the regions are not noise: {', '.join(problems)}; "
+            "a component may be missing"
+        )
     return Measurement(
         built,
         fit,
@@ -436,6 +453,7 @@ def measure(
         history,
         ensemble,
         interrupted,
+        adequacy,
         timings,
         started,
         warnings,

@@ -229,6 +229,30 @@ def transitions_table(m: Measurement) -> Table:
                 [s.information for s in shares],
             ),
             ("chi2", None, "chi squared of its pixels", [s.chi2 for s in shares]),
+            (
+                "p_chi2",
+                None,
+                "chance that noise exceeds this chi squared",
+                [t.probability for t in m.adequacy.regions],
+            ),
+            (
+                "runs_sigma",
+                None,
+                "runs of equal sign against noise, in sigma; negative: residuals wander",
+                [t.runs for t in m.adequacy.regions],
+            ),
+            (
+                "neighbour_correlation",
+                None,
+                "correlation of neighbouring residuals",
+                [t.correlation for t in m.adequacy.regions],
+            ),
+            (
+                "flags",
+                None,
+                "what speaks against noise in the residuals",
+                ["; ".join(found) for found in m.adequacy.region_problems],
+            ),
             ("telluric", None, "telluric ranges that touch it", [s.telluric for s in shares]),
             (
                 "chi2_share",
