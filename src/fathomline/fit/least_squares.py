@@ -116,16 +116,19 @@ class _Local:
         norm = np.sqrt(np.einsum("ij,ij->j", jacobian, jacobian))
         self.scale = np.where(norm > 0.0, norm, 1.0)
         scaled = jacobian / self.scale
-        if curvature is None:
-            u, singular, vt = np.linalg.svd(scaled, full_matrices=False)
-            known = singular > _RANK * max(singular[0], np.finfo(float).tiny)
+        u, singular, vt = np.linalg.svd(scaled, full_matrices=False)
+        known = singular > _RANK * max(singular[0], np.finfo(float).tiny)
+        if curvature is None or not known.any():
             projected = np.where(known, u.T @ residual, 0.0)
             self.vectors, self.values = vt.T, np.where(known, singular**2, 1.0)
             self.gradient = singular * projected
             self.edm = float(projected @ projected)  # p²/e without the square
             return
-        outer = np.outer(self.scale, self.scale)
-        self.values, self.vectors = np.linalg.eigh(scaled.T @ scaled + curvature / outer)
+        # along what J knows nothing of, the estimate of C is rounding and must not lead the way
+        basis = vt[known].T
+        bent = basis.T @ (curvature / np.outer(self.scale, self.scale)) @ basis
+        self.values, turned = np.linalg.eigh(np.diag(singular[known] ** 2) + bent)
+        self.vectors = basis @ turned
         gradient = scaled.T @ residual
         if bias is not None:
             gradient = gradient + bias / self.scale
