@@ -50,7 +50,6 @@ EDM_TOLERANCE = 1e-8
 """Default stopping rule: all parameters within 1e-4 σ of the local minimum."""
 
 _RANK = 1e-10  # singular values below this share of the largest carry no information
-_NO_CURVATURE = 1e-13  # of the largest eigenvalue: rounding of a matrix that was squared
 _FIRST_RADIUS = 100.0
 _SMALLEST_RADIUS = 1e-10
 _ROUNDING = 1e-11  # of χ²: a smaller difference is rounding of the model
@@ -132,11 +131,8 @@ class _Local:
         gradient = scaled.T @ residual
         if bias is not None:
             gradient = gradient + bias / self.scale
-        # directions without information stay where they are, as in the other model
-        known = np.abs(self.values) > _NO_CURVATURE * float(self.values[-1])
-        self.gradient = np.where(known, self.vectors.T @ gradient, 0.0)
-        self.values = np.where(known, self.values, 1.0)
-        positive = bool(self.values.min() > 0.0)
+        self.gradient = self.vectors.T @ gradient
+        positive = bool(self.values[0] > _RANK**2)
         self.edm = float(np.sum(self.gradient**2 / self.values)) if positive else math.inf
 
     def solve(self, radius: float) -> Array:
