@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from fathomline.atomic import AtomicData, Transition
+from fathomline.atomic import AtomicData, Transition, with_abundances
 from fathomline.constants import C_KMS
 from fathomline.errors import JobError, ResultError
 from fathomline.job.building import unknown_line
@@ -30,6 +30,7 @@ __all__ = ["Noise", "clouds_of", "simulate", "simulate_to_folder", "synthetic_gr
 Array = NDArray[np.float64]
 
 _BLOCK_KMS = 500.0  # absorption is computed to this distance from each line
+_REGION_MARGIN_KMS = 20.0  # a distortion of one region reaches so far beyond its window
 _MARGIN_KMS = 60.0  # of a synthetic spectrum beyond its windows
 
 
@@ -57,6 +58,12 @@ def clouds_of(job: Job) -> list[Cloud]:
     def value(k: int, quantity: str, ion: str | None = None) -> float:
         return start[Reference("component", k, quantity, ion)]
 
+    covering = {
+        k - 1: (g, start[Reference("covering", g, "covering")])
+        for g, group in enumerate(job.coverings)
+        for k in group.components
+    }
+
     def cloud(k: int, component: Component) -> Cloud:
         width = "b" if component.b is not None else "b_turb"
         return Cloud(
@@ -64,6 +71,7 @@ def clouds_of(job: Job) -> list[Cloud]:
             log_columns={ion: value(k, "logN", ion) for ion in component.logN},
             b_turb=value(k, width) if getattr(component, width) is not None else 0.0,
             temperature=value(k, "temperature") if component.temperature is not None else 0.0,
+            covering=covering.get(k),
         )
 
     return [cloud(k, component) for k, component in enumerate(job.components)]
@@ -175,10 +183,13 @@ def _transmission(
     return out
 
 
-def _distortion_of(job: Job, spectrum: str) -> Callable[[Array], Array] | None:
-    """Distortion velocity (m/s) of a spectrum at the job's values; regions do not matter here."""
+def _distortion_of(job: Job, atoms: AtomicData, spectrum: str) -> Callable[[Array], Array] | None:
+    """Distortion velocity (m/s) of a spectrum at the job's values.
+
+    A term of some regions only holds in their windows and `_REGION_MARGIN_KMS` around.
+    """
     terms = [
-        (table.value, basis)
+        (table.value, basis, _ranges(job, atoms, table.regions))
         for table, basis in zip(job.distortions, distortion_bases(job), strict=True)
         if spectrum in table.spectra and table.value != 0.0
     ]
@@ -187,11 +198,50 @@ def _distortion_of(job: Job, spectrum: str) -> Callable[[Array], Array] | None:
 
     def velocity(wavelength: Array) -> Array:
         total = np.zeros_like(wavelength)
-        for value, basis in terms:
-            total += value * basis(wavelength)
+        for value, basis, ranges in terms:
+            inside = np.zeros(wavelength.shape, dtype=bool)
+            for low, high in ranges:
+                inside |= (wavelength >= low) & (wavelength <= high)
+            total += np.where(inside, value * basis(wavelength), 0.0)
         return total
 
     return velocity
+
+
+def _ranges(
+    job: Job, atoms: AtomicData, regions: Sequence[int] | None
+) -> list[tuple[float, float]]:
+    """Wavelengths (Å) of regions, counted from 1; everything for None."""
+    if regions is None:
+        return [(0.0, math.inf)]
+    found = []
+    for number in regions:
+        region = job.regions[number - 1]
+        z = job.absorber.redshift if region.redshift is None else region.redshift
+        centre = atoms[region.transition].observed_wavelength(z)
+        low, high = region.window
+        found.append(
+            (
+                centre * (1.0 + (low - _REGION_MARGIN_KMS) / C_KMS),
+                centre * (1.0 + (high + _REGION_MARGIN_KMS) / C_KMS),
+            )
+        )
+    return found
+
+
+def _with_heavy_magnesium(job: Job, atoms: AtomicData) -> AtomicData:
+    """The job's abundance of heavy magnesium, as fractions of the isotopes."""
+    heavy = job.start_values()[Reference("atomic", 0, "heavy_magnesium")]
+    if heavy == 1.0:
+        return atoms
+    isotopes = atoms.isotopes_of("Mg")
+    lightest = min(isotope.mass_number for isotope in isotopes)
+    parts = {
+        str(isotope.mass_number): heavy * isotope.abundance
+        for isotope in isotopes
+        if isotope.mass_number != lightest
+    }
+    return with_abundances(atoms, {"Mg": {str(lightest): 1.0 - sum(parts.values()), **parts}})
 
 
 def simulate(
@@ -226,6 +276,7 @@ def simulate(
     """
     start = job.start_values()
     alpha = start[Reference("alpha", 0, "dalpha")] if dalpha_ppm is None else dalpha_ppm
+    atoms = _with_heavy_magnesium(job, atoms)
     blends, blend_lines = _blends_of(job, atoms)
     clouds = [*(clouds_of(job) if clouds is None else clouds), *blends]
     lines = [*_lines_of(job, atoms), *blend_lines]
@@ -244,7 +295,7 @@ def simulate(
             pixels,
             spread.fwhm,
             alpha,
-            _distortion_of(job, table.id),
+            _distortion_of(job, atoms, table.id),
             profile,
         )
         sigma = np.full(flux.size, 1e-4 if math.isinf(noise.snr) else 1.0 / noise.snr)

@@ -45,6 +45,8 @@ class Cloud:
     temperature : float
         Kinetic temperature, K.
     redshift : float or None
+    covering : (int, float) or None
+        Number of a group of clouds, and the part of the source that the group covers.
 
     """
 
@@ -53,6 +55,7 @@ class Cloud:
     b_turb: float = 0.0
     temperature: float = 0.0
     redshift: float | None = None
+    covering: tuple[int, float] | None = None
 
     def width(self, mass: float) -> float:
         """Doppler parameter, m/s, of atoms of `mass` u."""
@@ -146,7 +149,7 @@ def synthetic_transmission(
     c_kms = si.c / 1e3
     span = c_kms * math.log(edges[-1] / edges[0]) + 2.0 * reach
     grid = edges[0] * np.exp((np.arange(math.ceil(span / step) + 2) * step - reach) / c_kms)
-    lost = -np.expm1(-_optical_depth(grid, transitions, clouds, redshift, dalpha_ppm))
+    lost = _absorbed(grid, transitions, clouds, redshift, dalpha_ppm)
     half = math.ceil(reach / step)
     offset: Array = np.arange(-half, half + 1, dtype=np.float64) * step
     kernel = np.exp(-0.5 * (offset / sigma) ** 2) if profile is None else profile(offset)
@@ -155,6 +158,25 @@ def synthetic_transmission(
     primitive = CubicSpline(grid, smooth).antiderivative()
     mean: Array = np.diff(primitive(edges)) / np.diff(edges)
     return mean
+
+
+def _absorbed(
+    grid: Array,
+    transitions: Sequence[Transition],
+    clouds: Sequence[Cloud],
+    redshift: float,
+    dalpha_ppm: float,
+) -> Array:
+    """1 − T: clouds that cover a part C of the source together let 1 − C + C e^{−τ} pass."""
+    groups = dict.fromkeys(cloud.covering for cloud in clouds)
+    transmission = np.ones_like(grid)
+    for group in groups:
+        own = [cloud for cloud in clouds if cloud.covering == group]
+        through = np.exp(-_optical_depth(grid, transitions, own, redshift, dalpha_ppm))
+        part = 1.0 if group is None else group[1]
+        transmission *= 1.0 - part + part * through
+    lost: Array = 1.0 - transmission
+    return lost
 
 
 def _true_wavelength(recorded: Array, distortion: Callable[[Array], Array]) -> Array:
