@@ -32,6 +32,7 @@ __all__ = [
     "restarts_table",
     "settings",
     "statuses",
+    "structure_table",
     "transitions_text",
 ]
 
@@ -218,6 +219,38 @@ def components_text(m: Measurement) -> TableText:
             *((f"log N({ion})", "cm⁻²") for ion in ions),
         ),
         tuple(rows),
+    )
+
+
+def structure_table(m: Measurement) -> TableText | None:
+    """How the search came to the structure; None when components were given."""
+    if not m.history:
+        return None
+    rows = tuple(
+        (
+            Cell(str(k)),
+            Cell(step.action),
+            Cell(str(step.n_components)),
+            Cell(str(step.n_interlopers)),
+            Cell(f"{step.criterion:.2f}"),
+            Cell(f"{step.chi2:.2f}"),
+            Cell(_signed(step.dalpha, 2)),
+        )
+        for k, step in enumerate(m.history, start=1)
+    )
+    return TableText(
+        f"Accepted steps of the search, with Δα/α free in every fit. The criterion is "
+        f"{m.asked.structure.criterion}.",
+        (
+            ("Step", ""),
+            ("Change", ""),
+            ("Components", ""),
+            ("Interlopers", ""),
+            ("Criterion", ""),
+            ("χ²", ""),
+            ("Δα/α", "ppm"),
+        ),
+        rows,
     )
 
 

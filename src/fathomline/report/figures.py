@@ -43,6 +43,7 @@ if TYPE_CHECKING:
     from matplotlib.text import Text
 
     from fathomline.job.measurement import Measurement
+from fathomline.report.ensemble_figure import model_ensemble
 
 __all__ = ["FIGURES", "render_figure", "residual_summary", "save_figures", "velocity_stack"]
 
@@ -497,7 +498,10 @@ def save_figures(measurement: Measurement, folder: Path) -> list[Path]:
     """
     folder.mkdir(parents=True, exist_ok=True)
     written = []
-    for name, draw in FIGURES.items():
+    drawn = dict(FIGURES)
+    if measurement.ensemble is not None:
+        drawn["model-ensemble"] = model_ensemble
+    for name, draw in drawn.items():
         figure = draw(measurement)
         for kind in ("pdf", "png"):
             path = folder / f"{name}.{kind}"

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import fathomline
 from fathomline.report import content
+from fathomline.report.ensemble_figure import model_ensemble
 from fathomline.report.figures import residual_summary, velocity_stack
 from fathomline.report.panels import measurement_panels
 from fathomline.report.svg import inline_svg
@@ -69,6 +70,8 @@ def render_report(measurement: Measurement, *, command: str = "") -> str:
         n_transitions=len({t.name for t in measurement.built.transitions}),
         stack=_stack(measurement),
         residuals=_residuals(measurement),
+        ensemble=_ensemble(measurement),
+        structure=content.structure_table(measurement),
         transitions=content.transitions_text(measurement),
         components=content.components_text(measurement),
         others=content.others_table(measurement),
@@ -101,6 +104,14 @@ def _stack(measurement: Measurement) -> _Drawing:
         "" if same else inline_svg(narrow, "stack-narrow", label),
         wide.get_figwidth() * 25.4,
     )
+
+
+def _ensemble(measurement: Measurement) -> _Drawing | None:
+    if measurement.ensemble is None:
+        return None
+    figure = model_ensemble(measurement)
+    label = "Change of the fine-structure constant of every structure against its AICc"
+    return _Drawing(inline_svg(figure, "ensemble", label), "", figure.get_figwidth() * 25.4)
 
 
 def _residuals(measurement: Measurement) -> _Drawing:
