@@ -186,7 +186,6 @@ def _relative(path: Path, folder: Path) -> str:
         text = os.path.relpath(path, folder)
     except ValueError:
         text = str(path.absolute())
-    # a dollar sign before a brace would be a variable
     return Path(text).as_posix()
 
 

@@ -61,7 +61,7 @@ SOLAR_ABUNDANCE = {
     "C": 8.43, "N": 7.83, "O": 8.69, "Na": 6.24, "Mg": 7.60, "Al": 6.45, "Si": 7.51, "Ca": 6.34,
     "Ti": 4.95, "Cr": 5.64, "Mn": 5.43, "Fe": 7.50, "Ni": 6.22, "Zn": 4.56,
 }  # fmt: skip
-"""log10 of the number of atoms per 10¹² of hydrogen (Asplund et al. 2009, ARA&A 47, 481, Table 1)."""
+"""log10 of the number of atoms per 10¹² of hydrogen (Asplund et al. 2009, ARA&A 47, 481)."""
 
 _NEUTRAL = 2.5  # dex by which a neutral metal is rarer (rough, no source; it only ranks ions)
 _LEADING = 1.0  # dex below the strongest line within which ions decide where there is absorption
@@ -279,9 +279,7 @@ def consensus(lines: Sequence[Line]) -> Consensus:
     """Weighted mean N_a of the lines of one ion, by bin, without those that are too high."""
     values = [line.apparent() for line in lines]
     value = np.array([np.nan_to_num(v) for v, _ in values])
-    sigma = np.array(
-        [np.where(line.covered, s, 1.0) for line, (_, s) in zip(lines, values, strict=True)]
-    )
+    sigma = np.array([np.where(np.isfinite(error), error, 1.0) for _, error in values])
     covered = np.array([line.covered & ~line.spoiled for line in lines])
     lit = covered & ~np.array([line.dark for line in lines])
     limit = covered.any(axis=0) & ~lit.any(axis=0)
@@ -350,10 +348,7 @@ def _absorbed(
         certain = seen & (found.count > 1)
         # in its wings the weaker line is lost in the noise first
         for _ in range(_WING_BINS):
-            beside = np.concatenate(([False], certain[:-1])) | np.concatenate(
-                (certain[1:], [False])
-            )
-            certain |= beside & seen
+            certain |= seen & np.convolve(certain, [1, 1, 1], mode="same").astype(bool)
         several |= certain
         votes += seen
     for mask in (several, votes > 1):
@@ -457,7 +452,7 @@ def measure_profiles(
     width = max(fwhm, 2.0 * pixel)
     reach = max_velocity + CONTINUUM_REACH + 20.0
     half = int(np.ceil(reach / width))
-    edges = (np.arange(2 * half + 2) - half - 0.5) * width
+    edges: Array = (np.arange(2 * half + 2, dtype=np.float64) - half - 0.5) * width
     lines = []
     for transition in transitions:
         centre = transition.observed_wavelength(redshift)
