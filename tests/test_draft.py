@@ -223,8 +223,8 @@ def test_masked_pixels():
 def test_lines_of_other_redshifts_are_predicted_from_their_other_lines():
     # Mg II 2796 of another absorber falls on Fe II 2600 at -20 km/s, its 2803 is free
     other = ATOMS["Fe II 2600"].wavelength * (1 + Z) / ATOMS["Mg II 2796"].wavelength - 1.0
-    mine = [*clouds(), Cloud(-20.0, {"Mg II": 12.8}, b_turb=6.0, redshift=other)]
-    lines = spectrum(mine, snr=100.0)
+    stranger = [Cloud(-20.0, {"Mg II": 12.8}, b_turb=6.0, redshift=other)]
+    lines = spectrum(clouds())
     wave = lines.wavelength
     edges = np.append(lines.bounds()[0], lines.bounds()[1][-1])
     flux = lines.flux.copy()
@@ -232,11 +232,12 @@ def test_lines_of_other_redshifts_are_predicted_from_their_other_lines():
         place = ATOMS[name].observed_wavelength(other)
         a, b = np.searchsorted(wave, [place * (1.0 - 1e-3), place * (1.0 + 1e-3)])
         flux[a:b] *= synthetic_transmission(
-            edges[a : b + 1], [ATOMS[name]], mine[-1:], redshift=other, fwhm=FWHM
+            edges[a : b + 1], [ATOMS[name]], stranger, redshift=other, fwhm=FWHM
         )
     data = Spectrum.from_arrays(wave, flux, lines.error, np.ones(flux.size), name="red")
     result = drafted(data, other_redshifts=[other])
     candidate = result["Fe II 2600"]
+    assert candidate.used == any(low < -20.0 < high for low, high in candidate.exclude)
     assert any("Mg II 2796 of z" in text for text in (candidate.reason, *candidate.notes))
 
 
@@ -303,6 +304,29 @@ def test_numbers_out_of_range(more, message):
     data = spectrum([], last=5000.0)
     with pytest.raises(SpectrumError, match=message):
         draft([data], ATOMS, Z, **{"fwhm": 5.0, **more})
+
+
+def test_the_absorber_is_no_other_absorber():
+    with pytest.raises(SpectrumError, match="absorber itself"):
+        drafted(spectrum([], last=5000.0), other_redshifts=[Z + 1e-4])
+
+
+def test_a_noisy_spectrum_still_gives_its_strong_lines():
+    result = drafted(spectrum(clouds(), snr=10.0, seed=4))
+    # the strongest are dark to within the noise at -20 km/s, where the optical depth is 6
+    assert {"Fe II 2344", "Fe II 2586", "Mg II 2803"} <= {c.transition.name for c in result.used}
+    assert not result["Fe II 2382"].used
+    assert result["Fe II 2382"].reason.startswith("saturated")
+    assert -65.0 < result.extent[0] < -35.0
+    assert 15.0 < result.extent[1] < 47.0
+
+
+def test_a_spectrum_without_continuum():
+    data = spectrum(clouds())
+    slope = 37.0 * (1.0 + 0.2 * np.sin(data.wavelength / 40.0))
+    raw = Spectrum.from_arrays(data.wavelength, data.flux * slope, data.error * slope, name="raw")
+    used = {c.transition.name for c in drafted(raw).used}
+    assert used == {*FE_II, "Mg II 2796", "Mg II 2803"}
 
 
 def test_spectra_need_different_names():

@@ -10,8 +10,8 @@ detected
     source). A line for which the others of its ion predict less than 3σ, or much less than there
     is, is left out whatever is there.
 not saturated
-    A line is saturated where the flux is below 3σ or 0.05 over the width of the line-spread
-    function. It is left out where another line of its ion is used, or more than 5 %
+    A line is saturated where the mean flux over the width of the line-spread function is below
+    2σ or 0.05. It is left out where another line of its ion is used, or more than 5 %
     of its absorption is dark. If nothing else is left, saturated lines are used, with a note.
 not blended
     (a) The lines of other given redshifts, with the strength that their other lines predict; (b)
@@ -47,6 +47,7 @@ from fathomline.spectra import Spectrum
 
 __all__ = ["DETECTION", "Candidate", "Draft", "draft"]
 
+_SAME = 50.0  # km/s between absorbers that can be told apart
 _DARK_SHARE = 0.05  # of the absorbed bins that may be dark
 
 
@@ -231,7 +232,8 @@ def draft(
     Raises
     ------
     SpectrumError
-        No spectrum is given, or two have one name, or a number is out of range.
+        No spectrum is given, or two have one name, or a number is out of range, or another redshift
+        is that of the absorber.
 
     """
     names = [spectrum.name for spectrum in spectra]
@@ -244,6 +246,12 @@ def draft(
             )
     if not redshift > -1.0:
         raise SpectrumError(f"draft: the redshift must be above -1, found {redshift!r}")
+    for other in other_redshifts:
+        if C_KMS * abs((1.0 + other) / (1.0 + redshift) - 1.0) < _SAME:
+            raise SpectrumError(
+                f"draft: the other redshift {other:g} is that of the absorber itself, to within "
+                f"{_SAME:g} km/s"
+            )
     pool = [t for t in atoms.find() if t.ground]
     covered = [
         t

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -197,8 +198,8 @@ class Judge:
             _, least, _ = self.detect(line, everything, template, scaled=False)
             result.expected = 1.0 / least
             result.too_deep = amplitude - 3.0 * error > _TOO_DEEP
-        dark = line.dark & self.inside
-        result.dark = self.dark_width(line) >= self.fwhm
+        dark = line.dark & self.inside & ~mask
+        result.dark = self.is_saturated(line, mask)
         result.dark_share = int(dark.sum()) / int(self.profiles.absorbed.sum())
         centre = line.transition.observed_wavelength(self.profiles.redshift)
         low, high = (centre * (1.0 + v / C_KMS) for v in self.extent)
@@ -208,14 +209,25 @@ class Judge:
         result.refusal = self.refusal(result, {r.strength for r in bands})
         return result
 
-    def dark_width(self, line: Line) -> float:
-        """Longest run of pixels without measurable flux within the extent, km/s."""
-        longest = 0.0
+    def is_saturated(self, line: Line, foreign: Mask) -> bool:
+        """Whether the mean flux over the width of the line-spread function is dark anywhere.
+
+        Foreign absorption does not count.
+        """
         for piece in line.pieces:
             inside = (piece.velocity > self.extent[0]) & (piece.velocity < self.extent[1])
-            for first, last in runs(inside & piece.good & is_dark(piece.flux, piece.error)):
-                longest = max(longest, float(piece.width[first:last].sum()))
-        return longest
+            place = np.searchsorted(self.profiles.edges, piece.velocity[inside]) - 1
+            inside[inside] = ~foreign[place]
+            for first, last in runs(inside & piece.good):
+                count = math.ceil(self.fwhm / float(np.median(piece.width[first:last])) - 0.1)
+                if last - first < count:
+                    continue
+                box = np.full(count, 1.0 / count)
+                flux = np.convolve(piece.flux[first:last], box, mode="valid")
+                error = np.sqrt(np.convolve(piece.error[first:last] ** 2, box**2, mode="valid"))
+                if is_dark(flux, error).any():
+                    return True
+        return False
 
     def refusal(self, judged: Judged, bands: set[str]) -> str:
         """Why a line must be left out, or nothing."""

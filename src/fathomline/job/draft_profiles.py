@@ -52,7 +52,7 @@ CONTINUUM_REACH = 120.0
 
 _JOIN = 40.0  # km/s: absorption separated by less belongs together
 _FULL = 0.5  # of a bin that must be covered by good pixels
-_DARK = 3.0  # σ of the flux below which a bin is saturated
+_DARK = 2.0  # σ of the flux below which a bin is saturated
 _DARK_LEVEL = 0.05  # and the flux below which it is, whatever the noise
 _BLENDED = 4.0  # σ by which a value exceeds those of its ion
 _TOLERANCE = 0.10  # of N_a: components that the spectrograph does not resolve
@@ -70,6 +70,7 @@ _SHOWN = 3.0  # σ of a line that confirms absorption
 PREDICTED = 0.02
 """Optical depth from which a line of another redshift spoils a bin."""
 
+_OTHER_REACH = 300.0  # km/s from another redshift to its absorption
 _POSSIBLE = 0.7  # share of a predicted depth that must be there
 _APART = 600.0  # km/s between lines that are not on the same pixels
 _SEEN = 5.0  # significance of an absorbed bin
@@ -89,7 +90,7 @@ class Piece:
 
 
 def is_dark(flux: Array, error: Array) -> Mask:
-    """Where a normalised flux is below 3σ or 0.05; False for NaN."""
+    """Where a normalised flux is below 2σ or 0.05; False for NaN."""
     with np.errstate(invalid="ignore"):
         mask: Mask = flux < np.maximum(_DARK * error, _DARK_LEVEL)
     return mask
@@ -140,6 +141,8 @@ class Consensus:
     ----------
     column, error : array (n,)
         cm⁻² per km/s; NaN without data.
+    significance : array (n,)
+        Of the absorption, σ; 0 without data.
     count : array (n,)
         Lines that show absorption by themselves.
     clean : array (n,)
@@ -151,15 +154,10 @@ class Consensus:
 
     column: Array
     error: Array
+    significance: Array
     count: NDArray[np.intp]
     clean: Mask
     limit: Mask
-
-    @property
-    def significance(self) -> Array:
-        """Value over error, 0 without data."""
-        with np.errstate(invalid="ignore"):
-            return np.nan_to_num(self.column / self.error, nan=0.0)
 
 
 @dataclass
@@ -305,10 +303,16 @@ def consensus(lines: Sequence[Line]) -> Consensus:
     with np.errstate(divide="ignore", invalid="ignore"):
         column = np.where(total > 0.0, (weights * value).sum(axis=0) / total, np.nan)
         error = np.where(total > 0.0, total**-0.5, np.nan)
+    # the significance comes from the depth: that of an optical depth is lost in a dark bin
+    noise = np.array([np.hypot(np.where(line.covered, line.error, 1.0), _FLOOR) for line in lines])
+    depth_ratio = np.array([1.0 - np.where(line.covered, line.flux, 1.0) for line in lines]) / noise
+    share = use * np.array([[line.strength] for line in lines]) / noise
+    norm = np.sqrt((share**2).sum(axis=0))
+    significance = (share * depth_ratio).sum(axis=0) / np.where(norm > 0.0, norm, 1.0)
     # lines that show the absorption by themselves
-    shown = use & (value > _SHOWN * sigma)
+    shown = use & (depth_ratio > _SHOWN)
     clean = shown & ~np.array([line.telluric for line in lines])
-    return Consensus(column, error, shown.sum(axis=0), clean.any(axis=0), limit)
+    return Consensus(column, error, significance, shown.sum(axis=0), clean.any(axis=0), limit)
 
 
 def _seen(significance: Array) -> Mask:
@@ -519,7 +523,10 @@ def other_absorption(
                 for s in spectra
             )
         ]
-        other = measure_profiles(spectra, atoms, pool, redshift, max_velocity=300.0, fwhm=fwhm)
+        # half of the way to this absorber, so as not to take its absorption for the other's
+        distance = C_KMS * abs((1.0 + redshift) / (1.0 + own.redshift) - 1.0)
+        reach = min(_OTHER_REACH, 0.5 * distance)
+        other = measure_profiles(spectra, atoms, pool, redshift, max_velocity=reach, fwhm=fwhm)
         if other.extent is None:
             continue
         for line in other.lines:
