@@ -10,6 +10,7 @@ COMMANDS = {
     "demo": "Write an invented absorber and measure it: the quickest real run.",
     "lines": "List transitions, and where they fall in a spectrum.",
     "inspect": "Show what the reader understood of a spectrum.",
+    "draft": "Find covered and detected transitions and write a job.",
     "simulate": "Write synthetic spectra of the model of a job.",
     "calibrate": "Fit distortion terms of a wavelength scale.",
     "measure": "Fit jobs and write their result folders.",

@@ -20,7 +20,7 @@ from fathomline.job.number import Number
 from fathomline.job.schema import Job
 from fathomline.job.table import Table
 
-__all__ = ["job_to_data", "job_to_toml", "write_job"]
+__all__ = ["job_to_data", "job_to_toml", "toml_string", "write_job"]
 
 _BARE_KEY = re.compile(r"[A-Za-z0-9_-]+")
 _CONTROL = re.compile(r'[\x00-\x1f\x7f"\\]')
@@ -150,7 +150,7 @@ def _value(value: object) -> str:
     if isinstance(value, int | float):
         return repr(value)
     if isinstance(value, str):
-        return _string(value)
+        return toml_string(value)
     if isinstance(value, Mapping):
         inside = ", ".join(_assignments(value))
         return f"{{ {inside} }}" if inside else "{}"
@@ -160,10 +160,10 @@ def _value(value: object) -> str:
 
 
 def _key(key: str) -> str:
-    return key if _BARE_KEY.fullmatch(key) else _string(key)
+    return key if _BARE_KEY.fullmatch(key) else toml_string(key)
 
 
-def _string(text: str) -> str:
+def toml_string(text: str) -> str:
     """A literal string where that spares escapes, such as in references with quotes."""
     found = set(_CONTROL.findall(text))
     if found and found <= {'"', "\\"} and "'" not in text:
