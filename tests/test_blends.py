@@ -321,3 +321,16 @@ def test_partial_covering_is_recovered():
     assert abs(width - 1.0) < 0.25
     assert abs(its_mean) < MEAN_PULL
     assert full.chi2_nu.mean() > 1.1 > 1.02 > partial.chi2_nu.mean()
+
+
+def test_the_report_of_a_job_with_an_unknown_line(tmp_path):
+    """A line without a place in the transition tables has no row among the atomic data."""
+    from fathomline.cli.main import run
+    from fathomline.job.demo import demo_text, write_demo
+
+    job = write_demo(tmp_path / "d")
+    text = demo_text() + "\n[[blend]]\nwavelength = 5593.9\nb = 6.0\nlogN = 11.5\n"
+    job.write_text(text, encoding="utf-8")
+    assert run(["measure", str(job)]) == 0
+    page = (tmp_path / "d/halden-a.result/report.html").read_text(encoding="utf-8")
+    assert "blend[1].logN" in page

@@ -37,12 +37,15 @@ from fathomline.model import (
 from fathomline.profile import TransitionLines
 from fathomline.spectra import Spectrum, TabulatedLineSpread, local_level
 
-__all__ = ["ALPHA", "BuiltModel", "build_model", "build_template", "unknown_line"]
+__all__ = ["ALPHA", "UNKNOWN", "BuiltModel", "build_model", "build_template", "unknown_line"]
 
 Array = NDArray[np.float64]
 
 ALPHA = "alpha.dalpha"
 """Name of Δα/α (ppm) among the parameters."""
+
+UNKNOWN = "unknown"
+"""Stands for the ion of a line of which only the wavelength is known."""
 
 _NEGLIGIBLE_DEPTH = 1e-5  # optical depth below which a line is left out of a region
 _BLEND_REACH = 100.0  # km/s that a blend may move from its redshift
@@ -450,7 +453,7 @@ class _Absorption:
 def unknown_line(wavelength: float) -> Transition:
     """A line of which only the observed wavelength is known; its column density is N f."""
     return Transition(
-        "unknown", f"{wavelength:g}", "", 1.0, 1e8 / wavelength, None, 1.0, None, None, None
+        UNKNOWN, f"{wavelength:g}", "", 1.0, 1e8 / wavelength, None, 1.0, None, None, None
     )
 
 

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 
 from fathomline.atomic import Transition
 from fathomline.fit import CAUTIONS, FLAGS
-from fathomline.job.building import ALPHA
+from fathomline.job.building import ALPHA, UNKNOWN
 from fathomline.report.numbers import plain_number, value_with_error
 
 if TYPE_CHECKING:
@@ -315,9 +315,13 @@ def atomic_table(m: Measurement) -> tuple[TableText, list[str]]:
     """The laboratory numbers behind every line that the model holds, and their sources.
 
     The numbers are those of the transition table, not rounded; the sources are numbered from 1.
+    Lines of which only the wavelength is known have none.
     """
     names = dict.fromkeys(
-        lines.name for segment in m.built.model.segments for _, lines in segment.lines
+        lines.name
+        for segment in m.built.model.segments
+        for _, lines in segment.lines
+        if not lines.name.startswith(UNKNOWN)
     )
     own = {transition.name: transition for transition in m.built.transitions}
     sources: dict[str, int] = {}
