@@ -163,7 +163,6 @@ def run(number: int, ensemble: int, blended: bool) -> Row:
     """Search, ensemble and final fits of one absorber, and the fit that knows the structure."""
     case = draw(number, blended=blended, ensemble=ensemble)
     began = time.perf_counter()
-    found = search_job(case.asked, [case.spectrum], ATOMS)
     row: Row = {
         "case": number,
         "ensemble": ensemble,
@@ -173,10 +172,7 @@ def run(number: int, ensemble: int, blended: bool) -> Row:
         "fwhm": case.fwhm,
         "regions": [region.transition for region in case.full.regions],
         "true_n": len(case.full.components),
-        "search_s": time.perf_counter() - began,
-        "steps": len(found.history),
     }
-    row["search"] = fitted_structure(case, found.clouds, found.interlopers, found.values[ALPHA])
     if ensemble:
         many = run_ensemble(case.asked, [case.spectrum], ATOMS, workers=1)
         best = many.members[0]
@@ -186,11 +182,19 @@ def run(number: int, ensemble: int, blended: bool) -> Row:
             mean=many.mean,
             between=many.between,
             accepted=len(many.accepted),
+            failures=list(many.failures),
             members=[
                 [m.aicc, m.dalpha, m.stat, len(m.clouds), len(m.interlopers), m.thermal, m.count]
                 for m in many.members
             ],
         )
+        # the first search of an ensemble is the plain one
+        plain = [m for m in many.members if m.seed == 0 and not m.thermal] or [best]
+        clouds, lines, dalpha = plain[0].clouds, plain[0].interlopers, plain[0].dalpha
+    else:
+        found = search_job(case.asked, [case.spectrum], ATOMS)
+        clouds, lines, dalpha = found.clouds, found.interlopers, found.values[ALPHA]
+    row["search"] = fitted_structure(case, clouds, lines, dalpha)
     row["seconds"] = time.perf_counter() - began
     row["known"] = summary(final_fit(case.full, case.spectrum, 0))
     return row
