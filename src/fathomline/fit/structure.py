@@ -480,12 +480,11 @@ class _Search:
         each ion then has a velocity of its own and tells nothing about Δα/α.
         """
         pairs = []
-        for i, one in enumerate(found.clouds):
-            for k, other in enumerate(found.clouds[:i]):
-                apart = abs(one.velocity - other.velocity)
-                disjoint = not one.log_columns.keys() & other.log_columns.keys()
-                if apart < _TWINS or (disjoint and apart < max(one.b, other.b)):
-                    pairs.append((apart, (i, k)))
+        for i, k in self.overlaps(found):
+            one, other = found.clouds[i], found.clouds[k]
+            apart = abs(one.velocity - other.velocity)
+            if apart < _TWINS or not one.log_columns.keys() & other.log_columns.keys():
+                pairs.append((apart, (i, k)))
         return [pair for _, pair in sorted(pairs)[:2]]
 
     def rearranged(self, found: Found) -> Found | None:
@@ -553,7 +552,26 @@ class _Search:
                 seen = own[ion] * 10.0 ** (2.0 * (usual - value))
                 if seen < _WEAK:
                     unseen.add((k, ion))
+        # where clouds overlap the worth of each is small because the other can stand in for it;
+        # two that share no ion would be one cloud in which each ion has a velocity of its own
+        kept = [
+            {ion for ion in cloud.log_columns if (k, ion) not in unseen}
+            for k, cloud in enumerate(found.clouds)
+        ]
+        for i, k in self.overlaps(found):
+            if not kept[i] & kept[k]:
+                unseen = {(j, ion) for j, ion in unseen if j not in (i, k)}
         return unseen
+
+    def overlaps(self, found: Found) -> list[tuple[int, int]]:
+        """Pairs of clouds closer than the larger of their widths."""
+        clouds = found.clouds
+        return [
+            (i, k)
+            for i in range(len(clouds))
+            for k in range(i)
+            if abs(clouds[i].velocity - clouds[k].velocity) < max(clouds[i].b, clouds[k].b)
+        ]
 
     def crowded(self, found: Found, k: int) -> bool:
         """Whether a cloud is too close to a neighbour, or too wide or narrow, to be trusted."""

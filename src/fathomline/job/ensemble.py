@@ -1,14 +1,13 @@
 """Many structure searches of one absorber: how much the answer depends on the model.
 
 Velocity structures are not unique (Lee et al. 2021, arXiv:2102.11648). An ensemble repeats the
-search from other random orders, with other criteria, broadening laws and prices of a place, and
-keeps every structure within `ACCEPTED` of the best, in AICc or in AICc with the price of its places
-(`fathomline.fit.structure`). Without the price structures have clouds that noise made, with it they
-lack clouds that blend into others; Δα/α may differ by more than its statistical error, and which of
-the two is true the data do not tell. Structures are ranked with the price. The average weighs them
-by exp(−Δ/2) (Burnham & Anderson 2002, Model Selection, §2.9); the *between-model σ* is the scatter
-of Δα/α over all accepted structures alike, about that average, because differences of a few units
-do not tell which structure is true.
+search from other random orders, with other criteria, broadening laws and prices of a place
+(`fathomline.fit.structure`), and keeps every structure whose AICc with the price of its places lies
+within `ACCEPTED` of the best. Searches without the price find structures that the others do not
+reach: with it clouds that blend into others are missed, and Δα/α may move by more than its
+statistical error. The average weighs structures by exp(−Δ/2) (Burnham & Anderson 2002, Model
+Selection, §2.9); the *between-model σ* is the scatter of Δα/α over all accepted structures alike,
+about that average, because differences of a few units do not tell which structure is true.
 """
 
 from __future__ import annotations
@@ -34,7 +33,7 @@ from fathomline.spectra import Spectrum
 __all__ = ["ACCEPTED", "Ensemble", "Member", "run_ensemble"]
 
 ACCEPTED = 10.0
-"""AICc, with or without the price of places, above the best that an accepted structure may have."""
+"""AICc with the price of places, above the best, that a structure may have to be accepted."""
 
 _SAME_CRITERION = 0.05
 _SAME_SIGMA = 0.02
@@ -106,8 +105,8 @@ class Ensemble:
 
 
 def _accepted(members: Sequence[Member]) -> list[Member]:
-    least, bare = min(m.cost for m in members), min(m.aicc for m in members)
-    return [m for m in members if m.cost <= least + ACCEPTED or m.aicc <= bare + ACCEPTED]
+    least = min(m.cost for m in members)
+    return [m for m in members if m.cost <= least + ACCEPTED]
 
 
 def member_of(found: Found, settings: SearchSettings) -> Member:
