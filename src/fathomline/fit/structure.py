@@ -13,9 +13,12 @@ forward
     when the criterion falls.
 backward
     Clouds and single ions of clouds that the data hardly need are left out one at a time, with a
-    full fit each; what does not pay stays out. Pairs too close to be told apart are merged.
+    full fit each; what does not pay stays out. Pairs too close to be told apart are merged, and so
+    are clouds that overlap without a common ion.
+rearranging
+    When neither helps, the widest clouds are split in two, with something else left out if need be.
 
-until neither changes anything. Where the gain comes from one region and the others speak against a
+until nothing changes anything. Where the gain comes from one region and the others speak against a
 cloud, an interloper is tried as well, and the criterion decides.
 
 Criteria, for χ², n data and p free parameters: AIC = χ² + 2p; AICc adds 2p(p+1)/(n − p − 1)
@@ -34,27 +37,17 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from fathomline.constants import C_KMS, DEPTH_CONSTANT, DOPPLER_KMS2
+from fathomline.constants import C_KMS, DEPTH_CONSTANT
 from fathomline.fit.least_squares import Minimum, minimise
 from fathomline.fit.result import aicc
-from fathomline.model import (
-    AbsorberModel,
-    ComponentTerms,
-    Parameter,
-    ParameterSet,
-    SegmentTerms,
-)
-from fathomline.profile import TransitionLines
+from fathomline.fit.template import WIDTH_LIMITS, Cloud, Interloper, Template
+from fathomline.model import AbsorberModel
 
 __all__ = [
     "CRITERIA",
-    "WIDTH_LIMITS",
-    "Cloud",
     "Found",
-    "Interloper",
     "SearchSettings",
     "Step",
-    "Template",
     "price_of_places",
     "search_structure",
 ]
@@ -78,12 +71,7 @@ CRITERIA: dict[str, Callable[[float, int, int], float]] = {
 """Information criteria: (χ², number of data, number of free parameters) → value; low is good."""
 
 _WIDTHS = (2.0, 4.0, 8.0)  # km/s of the clouds that the score test looks for
-WIDTH_LIMITS = (1.0, 30.0)
-"""Smallest and largest Doppler parameter (or turbulent part of it) of a cloud, km/s."""
-
-_T_BOUNDS = (100.0, 1e5)  # K
 _START_T = 8000.0
-_LOG_COLUMNS = (9.0, 17.0)
 _TRIES = 3  # places tried before the forward step gives up
 _SEED_GAIN = 40.0  # gain of a cloud that may be added together with others at the start
 _SEED_DISTANCE = 9.0  # km/s between those
@@ -98,127 +86,6 @@ _SPLITS = 3  # clouds that are split in two, the widest first, before the search
 _LEAST_CHANGE = 0.1  # of the criterion for a rearrangement: more than what a fit leaves to find
 _TWINS = 1.5  # km/s between clouds that may be one
 _WEAK = 12.0  # χ² that an ion or a cloud must be worth (Wald) to be left in peace
-
-
-@dataclass(frozen=True, slots=True)
-class Cloud:
-    """A velocity component: km/s about the absorber redshift, log10 N/cm⁻² by ion.
-
-    `b` is the Doppler parameter, or, where `temperature` (K) is given, its turbulent part.
-    """
-
-    velocity: float
-    b: float
-    log_columns: dict[str, float]
-    temperature: float | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class Interloper:
-    """A line in one segment: observed wavelength (Å), b (km/s), log10 of N f in cm⁻²."""
-
-    segment: int
-    wavelength: float
-    b: float
-    log_strength: float
-
-
-@dataclass(frozen=True)
-class Template:
-    """Everything of a model but its clouds.
-
-    Attributes
-    ----------
-    redshift : float
-    parameters : tuple of Parameter
-        Δα/α, line-spread functions, distortions, continua and so on.
-    alpha : int
-        Place of Δα/α.
-    segments : tuple of SegmentTerms
-    windows : dict
-        Lowest and highest velocity, km/s, at which an ion may absorb.
-    heavy : int, optional
-        As in `AbsorberModel`.
-
-    """
-
-    redshift: float
-    parameters: tuple[Parameter, ...]
-    alpha: int
-    segments: tuple[SegmentTerms, ...]
-    windows: dict[str, tuple[float, float]]
-    heavy: int | None = None
-
-    @property
-    def ions(self) -> tuple[str, ...]:
-        """Ions that a cloud can have."""
-        return tuple(self.windows)
-
-    def model(
-        self,
-        clouds: Sequence[Cloud],
-        interlopers: Sequence[Interloper] = (),
-        start: dict[str, float] | None = None,
-    ) -> AbsorberModel:
-        """Model of given clouds, with the other parameters at `start` where it names them."""
-        known = start or {}
-        parameters = [
-            replace(p, value=float(np.clip(known[p.name], p.lower, p.upper)))
-            if p.name in known and not p.fixed and p.tie is None
-            else p
-            for p in self.parameters
-        ]
-
-        def put(name: str, value: float, bounds: tuple[float, float]) -> int:
-            low, high = bounds
-            parameters.append(
-                Parameter(name, float(np.clip(value, low, high)), lower=low, upper=high)
-            )
-            return len(parameters) - 1
-
-        components = []
-        for k, cloud in enumerate(clouds):
-            name = f"component[{k + 1}]"
-            low = min(self.windows[ion][0] for ion in cloud.log_columns)
-            high = max(self.windows[ion][1] for ion in cloud.log_columns)
-            thermal = cloud.temperature is not None
-            width = put(f"{name}.{'b_turb' if thermal else 'b'}", cloud.b, WIDTH_LIMITS)
-            components.append(
-                ComponentTerms(
-                    velocity=put(f"{name}.velocity", cloud.velocity, (low, high)),
-                    log_columns={
-                        ion: put(f'{name}.logN["{ion}"]', value, _LOG_COLUMNS)
-                        for ion, value in cloud.log_columns.items()
-                    },
-                    b=None if thermal else width,
-                    b_turb=width if thermal else None,
-                    temperature=put(f"{name}.temperature", cloud.temperature or 0.0, _T_BOUNDS)
-                    if thermal
-                    else None,
-                )
-            )
-        segments = list(self.segments)
-        for k, line in enumerate(interlopers):
-            key, name = f"blend {k + 1}", f"blend[{k + 1}]"
-            components.append(
-                ComponentTerms(
-                    velocity=put(f"{name}.velocity", 0.0, (-15.0, 15.0)),
-                    log_columns={key: put(f"{name}.logN", line.log_strength, (8.0, 17.0))},
-                    b=put(f"{name}.b", line.b, (1.0, 60.0)),
-                    redshift=0.0,
-                )
-            )
-            own = segments[line.segment]
-            terms = TransitionLines.bare(line.wavelength)
-            segments[line.segment] = replace(own, lines=(*own.lines, (key, terms)))
-        return AbsorberModel(
-            self.redshift,
-            ParameterSet(parameters),
-            self.alpha,
-            components,
-            segments,
-            heavy=self.heavy,
-        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -806,10 +673,3 @@ def search_structure(
 
     """
     return _Search(template, settings or SearchSettings(), report).run(clouds, interlopers)
-
-
-def doppler_of(cloud: Cloud, mass: float) -> float:
-    """Doppler parameter (km/s) of atoms of `mass` u in a cloud."""
-    if cloud.temperature is None:
-        return cloud.b
-    return math.hypot(cloud.b, math.sqrt(DOPPLER_KMS2 * cloud.temperature / mass))
