@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
+from benchmarks.structure_campaign import draw, final_fit
 from fathomline.atomic import load_atomic_data
 from fathomline.fit import (
     CRITERIA,
@@ -151,3 +154,48 @@ def test_average_and_scatter_of_an_ensemble():
     assert [m.count for m in repeated.members] == [2]
     with pytest.raises(ValueError, match="no structure search succeeded"):
         summarise_members([], ["seed 1: failed"])
+
+
+def test_halves_of_a_cloud_with_one_ion_each_are_merged():
+    job, spectra = data()
+    template = build_template(job, spectra, ATOMS)
+    whole = search_structure(template)
+    *others, last = whole.clouds
+    halves = [
+        replace(last, velocity=last.velocity + shift, log_columns={ion: last.log_columns[ion]})
+        for ion, shift in (("Fe II", -0.2), ("Mg II", 0.2))
+    ]
+    found = search_structure(template, clouds=[*others, *halves])
+    assert len(found.clouds) == len(whole.clouds)
+    assert all(len(cloud.log_columns) == 2 for cloud in found.clouds)
+    assert found.criterion == pytest.approx(whole.criterion, abs=0.1)
+
+
+def test_two_clouds_that_one_in_the_wrong_place_hides():
+    # the components are 2.3 km/s apart behind an instrument of 5.9 km/s, and the score test puts
+    # the second 11 km/s away, at an AICc 6.3 above that of the fit from the true components
+    case = draw(17)
+    found = search_structure(build_template(case.asked, [case.spectrum], ATOMS))
+    known = final_fit(case.full, case.spectrum, 0)
+    assert len(found.clouds) == len(case.full.components) == 2
+    assert found.criterion <= aicc(known.chi2, known.n_data, len(known.free)) + 0.1
+
+
+def test_an_ion_that_is_seen_nowhere_leaves_a_job_that_can_be_built():
+    full = job_to_data(parse_job(demo_text(), "halden-a.toml", check_files=False))
+    window = full["region"][0]["window"]
+    full["region"].append({"transition": "Al II 1670", "window": window})
+    for component in full["component"]:
+        component["logN"]["Al II"] = 9.0
+    job = build_job(full)
+    edges = synthetic_grid(job, ATOMS, "red", 2.0)
+    (s,) = simulate(job, ATOMS, [edges], Noise(100, 3), dalpha_ppm=8.0)
+    spectrum = Spectrum.from_arrays(
+        s.wavelength, s.flux, s.error, s.continuum, lsf=GaussianLineSpread(5.2), name="red"
+    )
+    full.pop("component")
+    asked = build_job(full)
+    found = search_structure(build_template(asked, [spectrum], ATOMS))
+    assert sum("Al II" in cloud.log_columns for cloud in found.clouds) >= 1
+    new = job_with_structure(asked, found.clouds, found.interlopers, found.values[ALPHA])
+    build_model(new, [spectrum], ATOMS)

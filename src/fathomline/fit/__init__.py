@@ -7,15 +7,12 @@ from fathomline.fit.lmfit_bridge import free_vector, minimise_with_lmfit, to_lmf
 from fathomline.fit.result import FitResult, Restart, aicc
 from fathomline.fit.structure import (
     CRITERIA,
-    WIDTH_LIMITS,
-    Cloud,
     Found,
-    Interloper,
     SearchSettings,
     Step,
-    Template,
     search_structure,
 )
+from fathomline.fit.template import WIDTH_LIMITS, Cloud, Interloper, Template
 
 __all__ = [
     "CAUTIONS",

@@ -13,9 +13,12 @@ forward
     when the criterion falls.
 backward
     Clouds and single ions of clouds that the data hardly need are left out one at a time, with a
-    full fit each; what does not pay stays out. Pairs too close to be told apart are merged.
+    full fit each; what does not pay stays out. Pairs too close to be told apart are merged, and so
+    are clouds that overlap without a common ion.
+rearranging
+    When neither helps, the widest clouds are split in two, with something else left out if need be.
 
-until neither changes anything. Where the gain comes from one region and the others speak against a
+until nothing changes anything. Where the gain comes from one region and the others speak against a
 cloud, an interloper is tried as well, and the criterion decides.
 
 Criteria, for χ², n data and p free parameters: AIC = χ² + 2p; AICc adds 2p(p+1)/(n − p − 1)
@@ -34,27 +37,18 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from fathomline.constants import C_KMS, DEPTH_CONSTANT, DOPPLER_KMS2
+from fathomline.constants import C_KMS, DEPTH_CONSTANT
 from fathomline.fit.least_squares import Minimum, minimise
 from fathomline.fit.result import aicc
-from fathomline.model import (
-    AbsorberModel,
-    ComponentTerms,
-    Parameter,
-    ParameterSet,
-    SegmentTerms,
-)
-from fathomline.profile import TransitionLines
+from fathomline.fit.template import WIDTH_LIMITS, Cloud, Interloper, Template
+from fathomline.model import AbsorberModel
 
 __all__ = [
     "CRITERIA",
-    "WIDTH_LIMITS",
-    "Cloud",
     "Found",
-    "Interloper",
     "SearchSettings",
     "Step",
-    "Template",
+    "price_of_places",
     "search_structure",
 ]
 
@@ -77,12 +71,7 @@ CRITERIA: dict[str, Callable[[float, int, int], float]] = {
 """Information criteria: (χ², number of data, number of free parameters) → value; low is good."""
 
 _WIDTHS = (2.0, 4.0, 8.0)  # km/s of the clouds that the score test looks for
-WIDTH_LIMITS = (1.0, 30.0)
-"""Smallest and largest Doppler parameter (or turbulent part of it) of a cloud, km/s."""
-
-_T_BOUNDS = (100.0, 1e5)  # K
 _START_T = 8000.0
-_LOG_COLUMNS = (9.0, 17.0)
 _TRIES = 3  # places tried before the forward step gives up
 _SEED_GAIN = 40.0  # gain of a cloud that may be added together with others at the start
 _SEED_DISTANCE = 9.0  # km/s between those
@@ -92,128 +81,11 @@ _INTERLOPER_GAIN = 25.0  # of a line that may lie anywhere in any region, seen i
 # criteria count parameters and know nothing of that. Noise alone gains 2 ln(number of places).
 _CLOUD_COST = 6.0
 _INTERLOPER_COST = 12.0
+_LEFT_OUT = 6  # structures with something left out, tried before the backward step gives up
+_SPLITS = 3  # clouds that are split in two, the widest first, before the search ends
+_LEAST_CHANGE = 0.1  # of the criterion for a rearrangement: more than what a fit leaves to find
+_TWINS = 1.5  # km/s between clouds that may be one
 _WEAK = 12.0  # χ² that an ion or a cloud must be worth (Wald) to be left in peace
-
-
-@dataclass(frozen=True, slots=True)
-class Cloud:
-    """A velocity component: km/s about the absorber redshift, log10 N/cm⁻² by ion.
-
-    `b` is the Doppler parameter, or, where `temperature` (K) is given, its turbulent part.
-    """
-
-    velocity: float
-    b: float
-    log_columns: dict[str, float]
-    temperature: float | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class Interloper:
-    """A line in one segment: observed wavelength (Å), b (km/s), log10 of N f in cm⁻²."""
-
-    segment: int
-    wavelength: float
-    b: float
-    log_strength: float
-
-
-@dataclass(frozen=True)
-class Template:
-    """Everything of a model but its clouds.
-
-    Attributes
-    ----------
-    redshift : float
-    parameters : tuple of Parameter
-        Δα/α, line-spread functions, distortions, continua and so on.
-    alpha : int
-        Place of Δα/α.
-    segments : tuple of SegmentTerms
-    windows : dict
-        Lowest and highest velocity, km/s, at which an ion may absorb.
-    heavy : int, optional
-        As in `AbsorberModel`.
-
-    """
-
-    redshift: float
-    parameters: tuple[Parameter, ...]
-    alpha: int
-    segments: tuple[SegmentTerms, ...]
-    windows: dict[str, tuple[float, float]]
-    heavy: int | None = None
-
-    @property
-    def ions(self) -> tuple[str, ...]:
-        """Ions that a cloud can have."""
-        return tuple(self.windows)
-
-    def model(
-        self,
-        clouds: Sequence[Cloud],
-        interlopers: Sequence[Interloper] = (),
-        start: dict[str, float] | None = None,
-    ) -> AbsorberModel:
-        """Model of given clouds, with the other parameters at `start` where it names them."""
-        known = start or {}
-        parameters = [
-            replace(p, value=float(np.clip(known[p.name], p.lower, p.upper)))
-            if p.name in known and not p.fixed and p.tie is None
-            else p
-            for p in self.parameters
-        ]
-
-        def put(name: str, value: float, bounds: tuple[float, float]) -> int:
-            low, high = bounds
-            parameters.append(
-                Parameter(name, float(np.clip(value, low, high)), lower=low, upper=high)
-            )
-            return len(parameters) - 1
-
-        components = []
-        for k, cloud in enumerate(clouds):
-            name = f"component[{k + 1}]"
-            low = min(self.windows[ion][0] for ion in cloud.log_columns)
-            high = max(self.windows[ion][1] for ion in cloud.log_columns)
-            thermal = cloud.temperature is not None
-            width = put(f"{name}.{'b_turb' if thermal else 'b'}", cloud.b, WIDTH_LIMITS)
-            components.append(
-                ComponentTerms(
-                    velocity=put(f"{name}.velocity", cloud.velocity, (low, high)),
-                    log_columns={
-                        ion: put(f'{name}.logN["{ion}"]', value, _LOG_COLUMNS)
-                        for ion, value in cloud.log_columns.items()
-                    },
-                    b=None if thermal else width,
-                    b_turb=width if thermal else None,
-                    temperature=put(f"{name}.temperature", cloud.temperature or 0.0, _T_BOUNDS)
-                    if thermal
-                    else None,
-                )
-            )
-        segments = list(self.segments)
-        for k, line in enumerate(interlopers):
-            key, name = f"blend {k + 1}", f"blend[{k + 1}]"
-            components.append(
-                ComponentTerms(
-                    velocity=put(f"{name}.velocity", 0.0, (-15.0, 15.0)),
-                    log_columns={key: put(f"{name}.logN", line.log_strength, (8.0, 17.0))},
-                    b=put(f"{name}.b", line.b, (1.0, 60.0)),
-                    redshift=0.0,
-                )
-            )
-            own = segments[line.segment]
-            terms = TransitionLines.bare(line.wavelength)
-            segments[line.segment] = replace(own, lines=(*own.lines, (key, terms)))
-        return AbsorberModel(
-            self.redshift,
-            ParameterSet(parameters),
-            self.alpha,
-            components,
-            segments,
-            heavy=self.heavy,
-        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -231,6 +103,8 @@ class SearchSettings:
         Clouds have a temperature and a turbulent width instead of one b for all ions.
     max_iterations : int
         Of one fit.
+    price : float
+        Times the price of a place; 0 follows the criterion alone.
 
     """
 
@@ -239,6 +113,7 @@ class SearchSettings:
     seed: int = 0
     thermal: bool = False
     max_iterations: int = 60
+    price: float = 1.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -268,6 +143,8 @@ class Found:
     history : tuple of Step
     complete : bool
         False when the search was interrupted.
+    price : float
+        As in `SearchSettings`.
 
     """
 
@@ -278,18 +155,23 @@ class Found:
     criterion: float
     history: tuple[Step, ...] = field(default=())
     complete: bool = True
+    price: float = 1.0
 
     @property
     def cost(self) -> float:
         """What the search lowers: the criterion, and a price for each place chosen among many."""
-        places = _CLOUD_COST * len(self.clouds) + _INTERLOPER_COST * len(self.interlopers)
-        return self.criterion + places
+        return self.criterion + self.price * price_of_places(self.clouds, self.interlopers)
 
     @property
     def values(self) -> dict[str, float]:
         """Best value of every parameter, by name."""
         theta = self.model.parameters.expand(self.minimum.x)
         return dict(zip(self.model.parameters.names, theta.tolist(), strict=True))
+
+
+def price_of_places(clouds: Sequence[Cloud], interlopers: Sequence[Interloper]) -> float:
+    """What a structure pays on top of AICc because its places are the best of many."""
+    return _CLOUD_COST * len(clouds) + _INTERLOPER_COST * len(interlopers)
 
 
 class _Search:
@@ -340,6 +222,7 @@ class _Search:
             model,
             found,
             self.criterion(found.chi2, n_data, found.x.size),
+            price=self.settings.price,
         )
 
     def record(self, found: Found, action: str) -> None:
@@ -443,15 +326,67 @@ class _Search:
         for k, cloud in enumerate(found.clouds):
             strongest = max(worth.get(_column(k, ion), 0.0) for ion in cloud.log_columns)
             if strongest < 4.0 * _WEAK or self.crowded(found, k):
-                rest = [c for i, c in enumerate(found.clouds) if i != k]
+                rest = _without(found.clouds, k)
                 candidates.append((strongest, rest, list(found.interlopers)))
+        for i, k in self.twins(found):
+            merged = [c for j, c in enumerate(found.clouds) if j not in (i, k)]
+            merged.append(_merged(found.clouds[i], found.clouds[k]))
+            candidates.append((0.0, merged, list(found.interlopers)))
         for k in range(len(found.interlopers)):
             value = worth.get(f"blend[{k + 1}].logN", 0.0)
             if value < 4.0 * _WEAK:
                 rest_lines = [line for i, line in enumerate(found.interlopers) if i != k]
                 candidates.append((value, list(found.clouds), rest_lines))
         candidates.sort(key=lambda candidate: candidate[0])
-        return [(clouds, lines) for _, clouds, lines in candidates[:5]]
+        return [(clouds, lines) for _, clouds, lines in candidates[:_LEFT_OUT]]
+
+    def twins(self, found: Found) -> list[tuple[int, int]]:
+        """Pairs of clouds that may be one: nearly at one place, or without a common ion.
+
+        The second kind are the halves of a cloud whose ions were left out one here and one there;
+        each ion then has a velocity of its own and tells nothing about Δα/α.
+        """
+        pairs = []
+        for i, k in self.overlaps(found):
+            one, other = found.clouds[i], found.clouds[k]
+            apart = abs(one.velocity - other.velocity)
+            if apart < _TWINS or not one.log_columns.keys() & other.log_columns.keys():
+                pairs.append((apart, (i, k)))
+        return [pair for _, pair in sorted(pairs)[:2]]
+
+    def rearranged(self, found: Found) -> Found | None:
+        """The structure with a cloud split in two, and something else left out if need be.
+
+        One more cloud where the lines are already deep changes the flux only in second order, which
+        the score test does not see; and a cloud in the wrong place may stand in the way of two in
+        the right ones.
+        """
+        if len(found.clouds) >= self.settings.max_components:
+            return None
+        widest = sorted(range(len(found.clouds)), key=lambda k: -found.clouds[k].b)
+        for k in widest[:_SPLITS]:
+            cloud = found.clouds[k]
+            half = {ion: n - math.log10(2.0) for ion, n in cloud.log_columns.items()}
+            halves = [
+                replace(
+                    cloud,
+                    velocity=cloud.velocity + side * 0.6 * cloud.b,
+                    b=max(0.75 * cloud.b, 1.05 * WIDTH_LIMITS[0]),
+                    log_columns=half,
+                )
+                for side in (-1.0, 1.0)
+            ]
+            others = [c for i, c in enumerate(found.clouds) if i != k]
+            trial = self.fit([*others, *halves], found.interlopers, found.values)
+            if trial.cost < found.cost - _LEAST_CHANGE:
+                return trial
+            if trial.minimum.chi2 > found.minimum.chi2 - _LEAST_GAIN:
+                continue
+            for clouds, interlopers in self.weak_parts(trial)[:_SPLITS]:
+                fewer = self.fit(clouds, interlopers, trial.values)
+                if fewer.cost < found.cost - _LEAST_CHANGE:
+                    return fewer
+        return None
 
     def unseen_ions(self, found: Found, worth: dict[str, float]) -> set[tuple[int, str]]:
         """Cloud and ion where the ion is not seen and, at its usual share, could not be.
@@ -467,18 +402,43 @@ class _Search:
             for i, ion in enumerate(ions):
                 table[k, i] = cloud.log_columns.get(ion, np.nan)
         total = np.log10(np.nansum(10.0**table, axis=0))
+        # an ion that is seen nowhere keeps its strongest cloud: its regions must have a line
+        strongest = {
+            ion: int(np.nanargmax(table[:, i]))
+            for i, ion in enumerate(ions)
+            if not np.isnan(table[:, i]).all()
+        }
         unseen = set()
         for k, cloud in enumerate(found.clouds):
             own = {ion: worth.get(_column(k, ion), 0.0) for ion in cloud.log_columns}
             best = max(own, key=lambda ion: own[ion])
             for ion, value in cloud.log_columns.items():
-                if ion == best or own[ion] >= _WEAK / 3.0:
+                if ion == best or own[ion] >= _WEAK / 3.0 or strongest.get(ion) == k:
                     continue
                 usual = cloud.log_columns[best] + total[ions.index(ion)] - total[ions.index(best)]
                 seen = own[ion] * 10.0 ** (2.0 * (usual - value))
                 if seen < _WEAK:
                     unseen.add((k, ion))
+        # where clouds overlap the worth of each is small because the other can stand in for it;
+        # two that share no ion would be one cloud in which each ion has a velocity of its own
+        kept = [
+            {ion for ion in cloud.log_columns if (k, ion) not in unseen}
+            for k, cloud in enumerate(found.clouds)
+        ]
+        for i, k in self.overlaps(found):
+            if not kept[i] & kept[k]:
+                unseen = {(j, ion) for j, ion in unseen if j not in (i, k)}
         return unseen
+
+    def overlaps(self, found: Found) -> list[tuple[int, int]]:
+        """Pairs of clouds closer than the larger of their widths."""
+        clouds = found.clouds
+        return [
+            (i, k)
+            for i in range(len(clouds))
+            for k in range(i)
+            if abs(clouds[i].velocity - clouds[k].velocity) < max(clouds[i].b, clouds[k].b)
+        ]
 
     def crowded(self, found: Found, k: int) -> bool:
         """Whether a cloud is too close to a neighbour, or too wide or narrow, to be trusted."""
@@ -502,13 +462,45 @@ class _Search:
                     self.record(found, "add")
                     continue
                 better = self.backward(found)
+                if better is not None:
+                    found = better
+                    self.record(found, "leave out")
+                    continue
+                better = self.rearranged(found)
                 if better is None:
                     break
                 found = better
-                self.record(found, "leave out")
+                self.record(found, "rearrange")
         except KeyboardInterrupt:
             complete = False
         return replace(found, history=tuple(self.history), complete=complete)
+
+
+def _without(clouds: Sequence[Cloud], k: int) -> list[Cloud]:
+    """All clouds but one; ions that it alone has go to its nearest neighbour."""
+    gone, rest = clouds[k], [c for i, c in enumerate(clouds) if i != k]
+    left = {ion for cloud in rest for ion in cloud.log_columns}
+    orphans = {ion: n for ion, n in gone.log_columns.items() if ion not in left}
+    if rest and orphans:
+        near = min(range(len(rest)), key=lambda i: abs(rest[i].velocity - gone.velocity))
+        rest[near] = replace(rest[near], log_columns={**rest[near].log_columns, **orphans})
+    return rest
+
+
+def _merged(one: Cloud, other: Cloud) -> Cloud:
+    """One cloud for two: all column, the width and place of the mean."""
+    columns = {
+        ion: math.log10(
+            sum(10.0 ** c.log_columns[ion] for c in (one, other) if ion in c.log_columns)
+        )
+        for ion in {**one.log_columns, **other.log_columns}
+    }
+    return replace(
+        one,
+        velocity=0.5 * (one.velocity + other.velocity),
+        b=0.5 * (one.b + other.b),
+        log_columns=columns,
+    )
 
 
 def _column(k: int, ion: str) -> str:
@@ -681,10 +673,3 @@ def search_structure(
 
     """
     return _Search(template, settings or SearchSettings(), report).run(clouds, interlopers)
-
-
-def doppler_of(cloud: Cloud, mass: float) -> float:
-    """Doppler parameter (km/s) of atoms of `mass` u in a cloud."""
-    if cloud.temperature is None:
-        return cloud.b
-    return math.hypot(cloud.b, math.sqrt(DOPPLER_KMS2 * cloud.temperature / mass))

@@ -1,11 +1,13 @@
 """Many structure searches of one absorber: how much the answer depends on the model.
 
 Velocity structures are not unique (Lee et al. 2021, arXiv:2102.11648). An ensemble repeats the
-search from other random orders, with other criteria and broadening laws, and keeps every structure
-whose AICc lies within `ACCEPTED` of the best. The average weighs them by exp(−ΔAICc/2) (Burnham &
-Anderson 2002, Model Selection, §2.9); the *between-model σ* is the scatter of Δα/α over all
-accepted structures alike, about that average, because differences of a few units in AICc do not
-tell which structure is true.
+search from other random orders, with other criteria, broadening laws and prices of a place
+(`fathomline.fit.structure`), and keeps every structure whose AICc with the price of its places lies
+within `ACCEPTED` of the best. Searches without the price find structures that the others do not
+reach: with it clouds that blend into others are missed, and Δα/α may move by more than its
+statistical error. The average weighs structures by exp(−Δ/2) (Burnham & Anderson 2002, Model
+Selection, §2.9); the *between-model σ* is the scatter of Δα/α over all accepted structures alike,
+about that average, because differences of a few units do not tell which structure is true.
 """
 
 from __future__ import annotations
@@ -22,6 +24,7 @@ from fathomline.atomic import AtomicData
 from fathomline.fit import Cloud, Found, Interloper, SearchSettings, search_structure
 from fathomline.fit.covariance import covariance_from_jacobian
 from fathomline.fit.result import aicc
+from fathomline.fit.structure import price_of_places
 from fathomline.job.building import ALPHA, build_template
 from fathomline.job.schema import Job
 from fathomline.job.structure import given_clouds
@@ -30,7 +33,7 @@ from fathomline.spectra import Spectrum
 __all__ = ["ACCEPTED", "Ensemble", "Member", "run_ensemble"]
 
 ACCEPTED = 10.0
-"""AICc above the best that a structure may have to be accepted."""
+"""AICc with the price of places, above the best, that a structure may have to be accepted."""
 
 _SAME_CRITERION = 0.05
 _SAME_SIGMA = 0.02
@@ -67,6 +70,11 @@ class Member:
     stat: float | None
     count: int = 1
 
+    @property
+    def cost(self) -> float:
+        """AICc with the price of the places."""
+        return self.aicc + price_of_places(self.clouds, self.interlopers)
+
 
 @dataclass(frozen=True, slots=True)
 class Ensemble:
@@ -75,7 +83,7 @@ class Ensemble:
     Attributes
     ----------
     members : tuple of Member
-        Different structures, the lowest AICc first.
+        Different structures, the best first.
     mean : float
         Average of Δα/α over the accepted ones, ppm.
     between : float
@@ -92,8 +100,13 @@ class Ensemble:
 
     @property
     def accepted(self) -> tuple[Member, ...]:
-        """Members within `ACCEPTED` of the lowest AICc."""
-        return tuple(m for m in self.members if m.aicc <= self.members[0].aicc + ACCEPTED)
+        """Members within `ACCEPTED` of the best."""
+        return tuple(_accepted(self.members))
+
+
+def _accepted(members: Sequence[Member]) -> list[Member]:
+    least = min(m.cost for m in members)
+    return [m for m in members if m.cost <= least + ACCEPTED]
 
 
 def member_of(found: Found, settings: SearchSettings) -> Member:
@@ -116,7 +129,7 @@ def member_of(found: Found, settings: SearchSettings) -> Member:
 
 
 def _plan(job: Job, count: int) -> list[SearchSettings]:
-    """Settings of the searches: the job's own first, then other orders, criteria and laws."""
+    """Settings of the searches: the job's own first, then other laws, orders, prices, criteria."""
     own = job.structure
     plan = []
     for k in range(count):
@@ -127,6 +140,7 @@ def _plan(job: Job, count: int) -> list[SearchSettings]:
                 max_components=own.max_components,
                 seed=0 if k < 2 else own.seed + k,
                 thermal=thermal,
+                price=0.0 if k % 6 in (2, 3) else 1.0,
             )
         )
     return plan
@@ -158,9 +172,9 @@ def _one(settings: SearchSettings) -> Member | str:
 
 
 def _distinct(members: Sequence[Member]) -> list[Member]:
-    """Members without repetitions, the lowest AICc first."""
+    """Members without repetitions, the best first."""
     kept: list[Member] = []
-    for member in sorted(members, key=lambda m: m.aicc):
+    for member in sorted(members, key=lambda m: m.cost):
         for i, other in enumerate(kept):
             close = abs(member.aicc - other.aicc) < _SAME_CRITERION
             sigma = other.stat or 1.0
@@ -189,10 +203,10 @@ def summarise_members(members: Sequence[Member], failures: Sequence[str] = ()) -
     if not members:
         raise ValueError(f"no structure search succeeded: {'; '.join(failures)}")
     distinct = _distinct(members)
-    best = distinct[0].aicc
-    accepted = [m for m in distinct if m.aicc <= best + ACCEPTED]
+    best = distinct[0].cost
+    accepted = _accepted(distinct)
     values = np.array([m.dalpha for m in accepted])
-    weights = np.array([math.exp(-0.5 * (m.aicc - best)) for m in accepted])
+    weights = np.array([math.exp(-0.5 * (m.cost - best)) for m in accepted])
     mean = float(weights @ values / weights.sum())
     between = float(np.sqrt(np.mean((values - mean) ** 2)))
     return Ensemble(tuple(distinct), mean, between, tuple(failures))
