@@ -40,7 +40,7 @@ from numpy.typing import NDArray
 from fathomline.constants import C_KMS, DEPTH_CONSTANT
 from fathomline.fit.least_squares import Minimum, minimise
 from fathomline.fit.result import aicc
-from fathomline.fit.template import WIDTH_LIMITS, Cloud, Interloper, Template
+from fathomline.fit.template import LOG_COLUMN_LIMITS, WIDTH_LIMITS, Cloud, Interloper, Template
 from fathomline.model import AbsorberModel
 
 __all__ = [
@@ -81,7 +81,7 @@ _INTERLOPER_GAIN = 25.0  # of a line that may lie anywhere in any region, seen i
 # criteria count parameters and know nothing of that. Noise alone gains 2 ln(number of places).
 _CLOUD_COST = 6.0
 _INTERLOPER_COST = 12.0
-_LEFT_OUT = 6  # structures with something left out, tried before the backward step gives up
+_LEFT_OUT = 10  # structures with something left out, tried before the backward step gives up
 _SPLITS = 3  # clouds that are split in two, the widest first, before the search ends
 _LEAST_CHANGE = 0.1  # of the criterion for a rearrangement: more than what a fit leaves to find
 _TWINS = 1.5  # km/s between clouds that may be one
@@ -350,7 +350,7 @@ class _Search:
         for i, k in self.overlaps(found):
             one, other = found.clouds[i], found.clouds[k]
             apart = abs(one.velocity - other.velocity)
-            if apart < _TWINS or not one.log_columns.keys() & other.log_columns.keys():
+            if apart < _TWINS or not _present(one) & _present(other):
                 pairs.append((apart, (i, k)))
         return [pair for _, pair in sorted(pairs)[:2]]
 
@@ -474,6 +474,11 @@ class _Search:
         except KeyboardInterrupt:
             complete = False
         return replace(found, history=tuple(self.history), complete=complete)
+
+
+def _present(cloud: Cloud) -> set[str]:
+    """Ions of a cloud that a fit has not driven to nothing."""
+    return {ion for ion, n in cloud.log_columns.items() if n > LOG_COLUMN_LIMITS[0] + 0.5}
 
 
 def _without(clouds: Sequence[Cloud], k: int) -> list[Cloud]:

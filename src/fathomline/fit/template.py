@@ -16,13 +16,15 @@ from fathomline.model import (
 )
 from fathomline.profile import TransitionLines
 
-__all__ = ["WIDTH_LIMITS", "Cloud", "Interloper", "Template"]
+__all__ = ["LOG_COLUMN_LIMITS", "WIDTH_LIMITS", "Cloud", "Interloper", "Template"]
 
 WIDTH_LIMITS = (1.0, 30.0)
 """Smallest and largest Doppler parameter (or turbulent part of it) of a cloud, km/s."""
 
+LOG_COLUMN_LIMITS = (9.0, 17.0)
+"""Of the column density of an ion of a cloud, log10 of cm⁻²."""
+
 _T_BOUNDS = (100.0, 1e5)  # K
-_LOG_COLUMNS = (9.0, 17.0)
 
 
 @dataclass(frozen=True, slots=True)
@@ -112,7 +114,7 @@ class Template:
                 ComponentTerms(
                     velocity=put(f"{name}.velocity", cloud.velocity, (low, high)),
                     log_columns={
-                        ion: put(f'{name}.logN["{ion}"]', value, _LOG_COLUMNS)
+                        ion: put(f'{name}.logN["{ion}"]', value, LOG_COLUMN_LIMITS)
                         for ion, value in cloud.log_columns.items()
                     },
                     b=None if thermal else width,
