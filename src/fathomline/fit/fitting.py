@@ -48,6 +48,7 @@ CAUTIONS = {
 RESTART_SHIFT = 10.0  # σ of Δα/α
 _RETURN_SIGMA = 0.02
 _RETURN_CHI2 = 0.01
+_FARTHEST_DEX = 0.5  # that a restart moves a column density
 _MAX_ROUNDS = 5
 _POOR_CHI2_NU = 1.5
 
@@ -155,9 +156,17 @@ def _restart(
     parameters = model.parameters
     sigmas, spread = covariance.sigmas, covariance.root()
     alpha = _free_alpha(model)
+    # the error of a blended column may be dexes: a start there is in another absorber
+    farthest = np.array(
+        [
+            _FARTHEST_DEX if parameters[i].unit.startswith("log10") else np.inf
+            for i in parameters.free_positions
+        ]
+    )
     records: list[Restart] = []
     for k in range(settings.restarts):
-        start = best.x + spread @ rng.standard_normal(best.x.size)
+        draw = spread @ rng.standard_normal(best.x.size)
+        start = best.x + np.clip(draw, -farthest, farthest)
         if alpha is not None:
             start[alpha] = best.x[alpha] + (-1) ** k * RESTART_SHIFT * sigmas[alpha]
         start = np.clip(start, parameters.lower, parameters.upper)
